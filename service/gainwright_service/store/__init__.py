@@ -1,0 +1,1 @@
+"""The store: the only wire between the processes."""

@@ -1,0 +1,29 @@
+"""The common base of every wire model and the constrained scalars they share."""
+
+from __future__ import annotations
+
+from typing import Annotated
+
+from pydantic import BaseModel, ConfigDict, Field
+
+Finite = Annotated[float, Field(allow_inf_nan=False, ge=-1e12, le=1e12)]
+Positive = Annotated[float, Field(gt=0, allow_inf_nan=False, le=1e12)]
+NonNegative = Annotated[float, Field(ge=0, allow_inf_nan=False, le=1e12)]
+Tag = Annotated[str, Field(pattern=r"^[A-Za-z0-9][A-Za-z0-9._-]{0,63}$", examples=["TIC-201"])]
+Site = Annotated[str, Field(pattern=r"^[a-z0-9][a-z0-9-]{0,31}$", examples=["local"])]
+ShortText = Annotated[str, Field(max_length=200)]
+LongText = Annotated[str, Field(max_length=2000)]
+
+
+class Wire(BaseModel):
+    """A closed, immutable document: an unknown field is an error that names it."""
+
+    model_config = ConfigDict(extra="forbid", frozen=True, populate_by_name=True)
+
+
+class Interval(Wire):
+    """A value with its interval at the analysis's confidence."""
+
+    value: Finite
+    low: Finite
+    high: Finite
