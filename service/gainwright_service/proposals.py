@@ -1,0 +1,227 @@
+"""Analyses as they are replied: of a finished experiment with its checklist, and of an uploaded record.
+
+Runs in an analysis process on plain documents and columns; opens nothing and reads no clock.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Mapping
+from typing import Any
+
+import numpy as np
+
+from gainwright import Record, analyse
+from gainwright.errors import GainwrightError
+from gainwright.results import Analysis
+from gainwright_service.checklist import (
+    Conclusion,
+    SignedAnswer,
+    Start,
+    assemble,
+    measure_after,
+    measure_before,
+    measure_during,
+    measure_record,
+)
+from gainwright_service.checklist.items import NOTICE
+from gainwright_service.errors import RecordRefused
+from gainwright_service.listened import FloatArray, listened, quantum_of
+from gainwright_service.proposing import Target, propose
+from gainwright_service.rendering import render
+from gainwright_service.replies import answers_of, known
+from gainwright_wire.analyses import AnalysisReply, Grade, RecordUpload, Verdict
+from gainwright_wire.loops import Loop
+from gainwright_wire.problems import FieldProblem
+from gainwright_wire.tasks import AsFound, LimitMet, Plan, Progress, StartExperiment
+
+
+def conclude_experiment(facts: dict[str, Any]) -> dict[str, Any]:
+    """Analyse a finished experiment, propose gains and fill its checklist.
+
+    Parameters
+    ----------
+    facts : dict
+        ``loop``, ``request``, ``plan``, ``as_found``, ``ended``, ``progress`` documents; ``columns`` with
+        ``time_s``, ``process_variable``, ``controller_output`` (echo), ``commanded_output``, ``phase`` names;
+        ``latency_s``, ``requested_by`` and ``sign_offs`` (item to verdict, person, reason).
+
+    Returns
+    -------
+    dict
+        ``analysis`` and ``checklist``, the wire's documents.
+    """
+    loop = Loop.model_validate(facts["loop"])
+    request = StartExperiment.model_validate(facts["request"])
+    plan = known(Plan, facts["plan"])
+    if plan is None:
+        raise ValueError("facts.plan: a concluded experiment has a plan")
+    as_found = known(AsFound, facts.get("as_found"))
+    columns = {name: np.asarray(column) for name, column in facts["columns"].items()}
+    latency_s = float(facts.get("latency_s") or 0.0)
+    progress = known(Progress, facts.get("progress")) or Progress()
+    analysis = _analysed(loop, columns, as_found, progress, latency_s)
+    end = _conclusion(loop, facts["ended"], columns, as_found, progress, latency_s, facts.get("gain_found"))
+    start = Start(
+        requested_by=facts["requested_by"],
+        attended=request.attended,
+        bench_sentence_signed=request.bench_sentence_signed,
+        approver=request.approver,
+        acknowledged_by=request.acknowledged_by,
+        work_order=request.work_order,
+    )
+    baseline = columns["phase"] == "listening"
+    heard = listened(
+        columns["time_s"][baseline],
+        columns["process_variable"][baseline],
+        nominal_interval_s=plan.sample_interval_s,
+        signal=loop.process_variable,
+    )
+    measurements = measure_before(loop, plan, start=start, listening=heard, as_found=as_found)
+    measurements |= measure_record(loop, plan, end, analysis, quantum_of(columns["process_variable"]))
+    measurements |= measure_during(plan, end)
+    measurements |= measure_after(loop, plan, end, analysis)
+    signed = {
+        item: SignedAnswer(Verdict(answer["verdict"]), answer["person"], answer["reason"])
+        for item, answer in (facts.get("sign_offs") or {}).items()
+    }
+    answers = answers_of(request, facts["requested_by"]) | signed
+    sheet = assemble(loop.loop_class, ("before", "during", "after"), measurements, answers)
+    return {
+        "analysis": analysis.model_dump(mode="json", by_alias=True),
+        "checklist": sheet.model_dump(mode="json", by_alias=True),
+    }
+
+
+def analyse_upload(document: dict[str, Any]) -> dict[str, Any]:
+    """Analyse an uploaded record.
+
+    Parameters
+    ----------
+    document : dict
+        The wire's `RecordUpload`.
+
+    Returns
+    -------
+    dict
+        The wire's `AnalysisReply`.
+
+    Raises
+    ------
+    RecordRefused
+        Naming the column at fault and what is allowed.
+    """
+    upload = RecordUpload.model_validate(document)
+    try:
+        record = Record(
+            time=upload.time_s,
+            process_variable=upload.process_variable,
+            controller_output=upload.controller_output,
+        )
+        analysis = analyse(
+            record,
+            reference=upload.reference,
+            hysteresis=upload.hysteresis,
+            output_is=upload.output_is,
+            latency_s=upload.latency_s,
+            confidence=upload.confidence,
+        )
+    except GainwrightError as error:
+        raise record_refused(error) from error
+    target = Target(upload.controller, output_effect=None, latency_s=upload.latency_s)
+    return _reply(analysis, target).model_dump(mode="json", by_alias=True)
+
+
+def record_refused(error: GainwrightError) -> RecordRefused:
+    """The numerics' refusal of a record under the names of the wire."""
+    field = "time_s" if error.field == "time" else error.field
+    at_fault = FieldProblem(field=field, problem=error.problem, allowed=error.allowed)
+    return RecordRefused(f"{field}: {error.problem}; allowed: {error.allowed}", (at_fault,))
+
+
+def _analysed(
+    loop: Loop, columns: Mapping[str, Any], as_found: AsFound | None, progress: Progress, latency_s: float
+) -> AnalysisReply:
+    """The analysis of everything up to the return; a record that carries none is unusable and says why."""
+    tested = np.isin(columns["phase"], ("listening", "probing", "swinging"))
+    commanded = columns["commanded_output"]
+    in_force = np.where(np.isfinite(commanded), commanded, columns["controller_output"])
+    usable = tested & np.isfinite(in_force) & np.isfinite(columns["process_variable"])
+    try:
+        record = Record(
+            time=columns["time_s"][usable],
+            process_variable=columns["process_variable"][usable],
+            controller_output=in_force[usable],
+        )
+        analysis = analyse(
+            record,
+            reference=as_found.reference if as_found is not None else None,
+            hysteresis=progress.hysteresis,
+            latency_s=latency_s,
+        )
+    except GainwrightError as error:
+        return _nothing(str(error))
+    return _reply(analysis, Target(loop.controller, loop.output_effect, latency_s))
+
+
+def _reply(analysis: Analysis, target: Target) -> AnalysisReply:
+    proposals, refused = propose(analysis, target)
+    return render(AnalysisReply, analysis, proposals=proposals, refused_rules=refused, notice=NOTICE)
+
+
+def _nothing(reason: str) -> AnalysisReply:
+    return AnalysisReply(
+        ultimate_gain=None,
+        ultimate_period_s=None,
+        describing_function=None,
+        fourier=None,
+        model_crossover=None,
+        response_points=(),
+        model=None,
+        findings=(),
+        grade=Grade.UNUSABLE,
+        reasons=(reason,),
+        swing=0.0,
+        relay_amplitude=0.0,
+        hysteresis=0.0,
+        noise=0.0,
+        scored_cycles=0,
+        confidence=0.95,
+        dominant_uncertainty="",
+        remedy="",
+        notice=NOTICE,
+    )
+
+
+def _conclusion(
+    loop: Loop,
+    ended: Mapping[str, Any],
+    columns: Mapping[str, Any],
+    as_found: AsFound | None,
+    progress: Progress,
+    latency_s: float,
+    gain_found: float | None,
+) -> Conclusion:
+    values: FloatArray = columns["process_variable"][np.isfinite(columns["process_variable"])]
+    commanded: FloatArray = columns["commanded_output"][np.isfinite(columns["commanded_output"])]
+    reference = as_found.reference if as_found is not None else None
+    off = np.abs(values - reference) if reference is not None else np.zeros(0)
+    scan_s = loop.controller.sample_interval_s if loop.controller is not None else None
+    return Conclusion(
+        outcome=ended["outcome"],
+        exit=ended["exit"],
+        exit_detail=ended.get("exit_detail", ""),
+        limit=known(LimitMet, ended.get("limit")),
+        differences=tuple(ended.get("differences", ())),
+        lowest=float(values.min()) if values.size else 0.0,
+        highest=float(values.max()) if values.size else 0.0,
+        worst_deviation=float(off.max()) if off.size else 0.0,
+        last_deviation=float(off[-1]) if off.size else 0.0,
+        lowest_command=float(commanded.min()) if commanded.size else None,
+        highest_command=float(commanded.max()) if commanded.size else None,
+        resting_output=as_found.resting_output if as_found is not None else None,
+        elapsed_s=progress.elapsed_s,
+        switches=progress.switches,
+        scan_s=scan_s if scan_s is not None else loop.sample_interval_s,
+        latency_s=latency_s,
+        gain_found=gain_found,
+    )
