@@ -127,7 +127,7 @@ def analyse_upload(document: dict[str, Any]) -> dict[str, Any]:
         )
     except GainwrightError as error:
         raise record_refused(error) from error
-    target = Target(upload.controller, output_effect=None, latency_s=upload.latency_s)
+    target = Target(upload.controller, output_effect=None)
     return _reply(analysis, target).model_dump(mode="json", by_alias=True)
 
 
@@ -160,7 +160,14 @@ def _analysed(
         )
     except GainwrightError as error:
         return _nothing(str(error))
-    return _reply(analysis, Target(loop.controller, loop.output_effect, latency_s))
+    target = Target(
+        loop.controller,
+        loop.output_effect,
+        loop.process_variable.unit,
+        loop.controller_output.unit,
+        loop.controller_output.span,
+    )
+    return _reply(analysis, target)
 
 
 def _reply(analysis: Analysis, target: Target) -> AnalysisReply:

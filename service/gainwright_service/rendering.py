@@ -1,12 +1,14 @@
 """A domain result becomes wire by equal names.
 
 A wire field takes the domain attribute of its own name, or of its name without the unit that the wire adds
-(`period_s` from ``period``). A complex response is split in its two parts. Nothing is listed twice: a field added
+(`period_s` from ``period``). A complex response is split in its two parts, and a number that
+is infinite for want of a bound is null where the wire allows it. Nothing is listed twice: a field added
 on both sides under one name arrives by itself, and a test proves that every field of an analysis does.
 """
 
 from __future__ import annotations
 
+import math
 import types
 import typing
 from collections.abc import Mapping
@@ -20,7 +22,7 @@ PARTS = {"real": ("response", "real"), "imaginary": ("response", "imag")}
 Document = TypeVar("Document", bound=Wire)
 
 
-def render(target: type[Document], source: object, **given: Any) -> Document:
+def render(target: type[Document], source: object, /, **given: Any) -> Document:
     """The wire document of a domain result; ``given`` overrides or adds fields.
 
     Raises
@@ -51,6 +53,8 @@ def attribute_of(source: object, name: str) -> str | None:
 
 
 def _convert(annotation: Any, value: Any) -> Any:
+    if isinstance(value, float) and not math.isfinite(value) and type(None) in typing.get_args(annotation):
+        return None
     document = wire_class(annotation)
     if document is None or value is None or isinstance(value, Mapping):
         return value

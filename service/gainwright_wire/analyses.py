@@ -57,6 +57,13 @@ class Model(Wire):
     damping: Finite | None
 
 
+class WeightedModel(Wire):
+    """An adequate model and its weight among the adequate ones."""
+
+    model: Model
+    weight: NonNegative
+
+
 class Finding(Wire):
     """One diagnosis: a number, its bounds, a verdict, one sentence."""
 
@@ -78,7 +85,7 @@ class GainSetting(Wire):
 
 
 class LoopMargins(Wire):
-    """Margins of the loop with the fitted model."""
+    """Margins of the loop with the fitted model; null where no bound exists."""
 
     gain_margin: Positive | None
     phase_margin_deg: Finite | None
@@ -167,6 +174,7 @@ class AnalysisReply(Wire):
     model_crossover: UltimatePoint | None
     response_points: tuple[ResponsePoint, ...]
     model: Model | None
+    models: tuple[WeightedModel, ...] = ()
     findings: tuple[Finding, ...]
     grade: Grade
     reasons: tuple[str, ...]

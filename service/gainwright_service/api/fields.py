@@ -10,7 +10,7 @@ from gainwright_wire.problems import FieldProblem
 
 _PLACES = {"body", "query", "path", "header"}
 _UNION_TAGS = {"modbus", "simulated"}
-_NAME = re.compile(r"^([a-z][a-z0-9_]*(?:\.[a-z0-9_]+)*(?:/[a-z_]+)?)\b:? ?")
+_NAME = re.compile(r"\b([a-z]+(?:[._][a-z]+)+(?:/[a-z_]+)?)\b|^([a-z]+) (?:is|must)\b")
 _MOST = 50
 
 
@@ -26,10 +26,17 @@ def _problem(error: Mapping[str, Any]) -> FieldProblem:
         discriminator = str(context.get("discriminator", "kind")).strip("'")
         field = f"{field}.{discriminator}" if field else discriminator
     elif "." not in kind and _is_ours(kind):
-        named = _NAME.match(message)
-        if named and named.group(1) != field:
-            field = f"{field}.{named.group(1)}" if field and "." not in named.group(1) else named.group(1)
+        field = _named(field, message)
     return FieldProblem(field=field, problem=message, allowed=_allowed(kind, message, context))
+
+
+def _named(field: str, message: str) -> str:
+    """The field that one of the wire's own sentences speaks of first, below ``field``."""
+    found = _NAME.search(message)
+    name = (found.group(1) or found.group(2)) if found else ""
+    if not name or name == field:
+        return field
+    return f"{field}.{name}" if field and "." not in name else name
 
 
 def _path(loc: Sequence[str | int]) -> str:
