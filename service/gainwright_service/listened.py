@@ -63,8 +63,9 @@ def _line(time_s: FloatArray, values: FloatArray) -> tuple[float, FloatArray, fl
     """Least-squares slope, the residual about the line, and the slope's standard error."""
     centred = time_s - np.mean(time_s)
     spread = float(np.sum(centred**2))
-    slope = float(np.sum(centred * values) / spread)
-    residual = values - np.mean(values) - slope * centred
+    about_mean = values - values[0] - np.mean(values - values[0])
+    slope = float(np.sum(centred * about_mean) / spread)
+    residual = about_mean - slope * centred
     error = float(np.sqrt(np.sum(residual**2) / max(1, values.size - 2) / spread))
     return slope, residual, error
 

@@ -6,13 +6,11 @@ The guard refuses a plan outside its limits once more.
 
 from __future__ import annotations
 
-from dataclasses import fields
-
 from gainwright_service.checklist.before import heartbeat_of
 from gainwright_service.checklist.items import BENCH_SENTENCE
 from gainwright_service.errors import PlanRefused, SafetyFunctionRefused
-from gainwright_service.experiment.plan import Plan
-from gainwright_wire.loops import Loop, LoopClass, WatchdogAction
+from gainwright_service.experiment.plan import Plan, PlanRefusedByGuard
+from gainwright_wire.loops import Loop, LoopClass, ModbusTcp, WatchdogAction
 from gainwright_wire.problems import FieldProblem
 from gainwright_wire.tasks import Plan as WirePlan
 from gainwright_wire.tasks import StartExperiment
@@ -20,6 +18,11 @@ from gainwright_wire.tasks import StartExperiment
 EXIT_VALID_S = 600.0
 SMALLEST_AMPLITUDE = 0.01
 """Share of span below which a relay is of no use."""
+
+FIRST_WAIT_SAMPLES = 50
+"""Samples without a crossing before the amplitude grows: people sample an oscillation 40 to 100 times a period."""
+RETURN_SAMPLES = 600
+"""Samples that the process variable is given to come back before the mode is restored."""
 
 
 class _Refusals:
@@ -48,9 +51,33 @@ def plan_experiment(loop: Loop, request: StartExperiment) -> Plan:
         No plan stays inside the limits; names every field at fault and what is allowed.
     """
     wire = plan_with_defaults(loop, request)
-    names = {field.name for field in fields(Plan)}
-    taken = {name: value for name, value in wire.model_dump().items() if name in names}
-    return Plan(**taken)
+    adapter = loop.adapter
+    beat = heartbeat_of(loop)
+    interval_s = wire.sample_interval_s
+    try:
+        return Plan(
+            **wire.model_dump(),
+            effect=1 if loop.output_effect == "raises" else -1,
+            range_low=loop.controller_output.low,
+            range_high=loop.controller_output.high,
+            output_quantum=_output_quantum(loop),
+            resting_output=request.resting_output,
+            reference=request.reference,
+            reads_mode=adapter.mode is not None if isinstance(adapter, ModbusTcp) else True,
+            setpoint_follows=loop.setpoint_follows_in_manual,
+            integral_follows=loop.integral_follows_in_manual,
+            watchdog=beat.watchdog.value if beat is not None else WatchdogAction.NONE.value,
+            watchdog_timeout_s=beat.timeout_s if beat is not None else None,
+            watchdog_value=beat.fixed_value if beat is not None else None,
+            listening_samples=int(wire.listening_s / interval_s),
+            settle_s=max(1.0, 3 * interval_s),
+            first_wait_s=max(1.0, FIRST_WAIT_SAMPLES * interval_s),
+            return_time_s=max(30.0, RETURN_SAMPLES * interval_s),
+        )
+    except PlanRefusedByGuard as error:
+        field, _, problem = str(error).partition(": ")
+        at_fault = FieldProblem(field=field, problem=problem, allowed="a plan inside the loop's ranges")
+        raise PlanRefused(str(error), (at_fault,)) from error
 
 
 def plan_with_defaults(loop: Loop, request: StartExperiment) -> WirePlan:
@@ -212,3 +239,10 @@ def _listening_s(loop: Loop, *, bench: bool) -> float:
     samples, least, most = (100, 5.0, 30.0) if bench else (200, 30.0, 300.0)
     wanted = min(most, max(samples * loop.sample_interval_s, least))
     return max(wanted, 20 * loop.sample_interval_s)
+
+
+def _output_quantum(loop: Loop) -> float:
+    """Smallest step of the output's register, output units; 0 for floating point."""
+    if not isinstance(loop.adapter, ModbusTcp) or loop.adapter.controller_output.format == "float32":
+        return 0.0
+    return abs(loop.adapter.controller_output.scale)
