@@ -12,24 +12,7 @@ from enum import StrEnum
 from typing import Protocol
 
 from gainwright_service.errors import AdapterError
-
-
-class Mode(StrEnum):
-    """The controller's mode as the device shows it."""
-
-    MANUAL = "manual"
-    AUTOMATIC = "automatic"
-    CASCADE = "cascade"
-    OTHER = "other"
-    UNKNOWN = "unknown"
-
-
-class Quality(StrEnum):
-    """Quality of the process variable's signal."""
-
-    GOOD = "good"
-    UNCERTAIN = "uncertain"
-    BAD = "bad"
+from gainwright_service.experiment.readings import Mode, Quality, Reading
 
 
 class Watchdog(StrEnum):
@@ -80,36 +63,6 @@ class Capabilities:
     integral_follows_in_manual: bool | None
     output_quantum: float
     link_time_s: float
-
-
-@dataclass(frozen=True, slots=True)
-class Reading:
-    """One observation of the loop, taken in one exchange.
-
-    Parameters
-    ----------
-    process_variable : float, PV units
-        NaN is never returned: a nonsensical value raises.
-    controller_output : float or None, output units
-        Echo of the register; None where the device has none.
-    setpoint : float or None, PV units
-    mode : Mode
-    output_limited : bool or None
-    quality : Quality
-    taken_at : float
-        Monotonic seconds of the service's clock, at the middle of the exchange.
-    source_time : float or None
-        The device's own time stamp, seconds since the epoch.
-    """
-
-    process_variable: float
-    controller_output: float | None
-    setpoint: float | None
-    mode: Mode
-    output_limited: bool | None
-    quality: Quality
-    taken_at: float
-    source_time: float | None = None
 
 
 @dataclass(frozen=True, slots=True)
