@@ -100,26 +100,21 @@ def cautions(loop: Loop, plan: Plan, predicted: Prediction) -> tuple[str, ...]:
             f"{plan.max_duration_s:.3g}: the test would be ended by it."
         )
     if predicted.basis != "limits" and predicted.switches > plan.max_switches:
-        found.append(
-            f"About {predicted.switches} switches are needed, limits.max_switches allows {plan.max_switches}."
-        )
+        found.append(f"About {predicted.switches} switches are needed, limits.max_switches allows {plan.max_switches}.")
     if plan.max_amplitude > 0.1 * out.span:
         found.append("limits.max_amplitude is above 10 % of the output's span.")
-    if loop.exit_action.kind == "as_found" and loop.integral_follows_in_manual is None:
+    if loop.exit_action.kind == "as_found" and loop.integral_follows_in_manual is not True:
         found.append(
-            "integral_follows_in_manual is not declared: a loop found in automatic is left in manual "
-            "at its resting "
-            "output until it is proven."
+            "integral_follows_in_manual is not declared: a test of the loop in automatic is refused until it is "
+            "proven. Put the loop into manual, or prove and declare it."
         )
     return tuple(found)
 
 
 HOW_TO_STOP = (
-    "POST /v1/experiments/{id}/stop, or the first Ctrl-C in the command; the output is handed back "
-    "before the reply "
-    "says so. Or take over at the device: change its mode or its output, and the test yields within "
-    "two samples and "
-    "writes nothing more. This stop is not an emergency stop."
+    "POST /v1/experiments/{id}/stop, or the first Ctrl-C in the command, which then waits until the output has "
+    "been handed back. Or take over at the device: change its mode or its output, and the test yields within two "
+    "samples and writes nothing more. This stop is not an emergency stop."
 )
 
 
@@ -145,9 +140,7 @@ def watchdog_in_words(loop: Loop) -> str:
     if loop.adapter.kind == "simulated":
         return "A simulated process: nothing is driven when the service is dead."
     if beat is None or beat.watchdog is WatchdogAction.NONE:
-        return (
-            "The device has no watchdog: a dead service leaves the output driven until somebody acts. Stay there."
-        )
+        return "The device has no watchdog: a dead service leaves the output driven until somebody acts. Stay there."
     if beat.watchdog is WatchdogAction.HOLD_LAST:
         return (
             f"The device holds its last output when the beats stop for {beat.timeout_s:g} s: a dead service leaves "

@@ -213,9 +213,7 @@ def _deviation(loop: Loop, name: str, refusals: _Refusals) -> float:
     if declared is not None:
         return declared
     if loop.loop_class is LoopClass.PLANT:
-        refusals.add(
-            f"limits.{name}", "class 'plant' needs it declared", f"more than 0 {loop.process_variable.unit}"
-        )
+        refusals.add(f"limits.{name}", "class 'plant' needs it declared", f"more than 0 {loop.process_variable.unit}")
     return min(0.1 * loop.process_variable.span, room / 2)
 
 

@@ -13,15 +13,18 @@ import math
 from dataclasses import dataclass
 from typing import Literal
 
+from gainwright_service.experiment.excitation import (
+    LARGEST_SHARE,
+    NEAR_ENOUGH,
+    RECENTRE_SHARE,
+    TARGET_HYSTERESES,
+    TARGET_SHARE,
+)
+from gainwright_service.experiment.guard import HARD_DEVIATION
+from gainwright_service.experiment.listening import HYSTERESIS_SIGMAS, SMALLEST_HYSTERESIS
 from gainwright_wire.tasks import Plan
 
-HYSTERESIS_OVER_NOISE = 3.0
-TARGET_SWING_OVER_HYSTERESIS = 4.0
-RECENTRED_BIAS = 0.25
-"""Share of the amplitude by which the bias may be off centre while the worst swing is reached."""
 SETTLING_SWITCHES = 4
-LAST_WORD_OVER_DEVIATION = 1.2
-"""The guard ends a test at once beyond this multiple of the allowed deviation."""
 RETURN_PERIODS = 1.5
 
 
@@ -106,7 +109,7 @@ def from_limits(plan: Plan) -> Prediction:
     return Prediction(
         basis="limits",
         worst_swing=None,
-        worst_deviation=LAST_WORD_OVER_DEVIATION * max(plan.deviation_up, plan.deviation_down),
+        worst_deviation=HARD_DEVIATION * max(plan.deviation_up, plan.deviation_down),
         period_s=None,
         time_to_finish_s=plan.max_duration_s,
         switches=plan.max_switches,
@@ -118,37 +121,48 @@ def from_limits(plan: Plan) -> Prediction:
 def from_guess(plan: Plan, guess: Guess) -> Prediction:
     """Predict from a stated first-order process with dead time."""
     gain = abs(guess.static_gain)
-    hysteresis = HYSTERESIS_OVER_NOISE * guess.noise
     ratio = guess.dead_time_s / guess.time_constant_s
     share = -math.expm1(-ratio)
-    target = TARGET_SWING_OVER_HYSTERESIS * hysteresis
-    needed = max(0.0, (target - hysteresis * (1 - share)) / (gain * share))
-    amplitude = _reached(plan, needed)
+    hysteresis, wanted, allowed = _wanted(plan, guess.noise)
+
+    def for_swing(swing: float) -> float:
+        return (swing - hysteresis * (1 - share)) / (gain * share)
+
+    needed = for_swing(wanted)
+    amplitude = _reached(plan, for_swing(min(wanted, allowed)))
     if gain * amplitude <= hysteresis:
         return _without_crossing(plan, gain * amplitude + hysteresis, needed)
     relative = hysteresis / (gain * amplitude)
     rise = ratio + math.log(2.0 - (1.0 - relative) * math.exp(-ratio))
     period = 2 * guess.time_constant_s * (rise - math.log1p(-relative))
     swing = gain * amplitude * share + hysteresis * (1 - share)
-    off_centre = gain * RECENTRED_BIAS * amplitude * share
-    return _cost(plan, "guess", amplitude, swing, off_centre + HYSTERESIS_OVER_NOISE * guess.noise, period, needed)
+    off_centre = gain * RECENTRE_SHARE * amplitude * share
+    return _cost(plan, "guess", amplitude, swing, off_centre + HYSTERESIS_SIGMAS * guess.noise, period, needed)
 
 
 def from_history(plan: Plan, history: History) -> Prediction:
     """Predict from the swing and period of the loop's last usable test."""
-    target = TARGET_SWING_OVER_HYSTERESIS * HYSTERESIS_OVER_NOISE * history.noise
-    needed = target / history.swing_per_output
-    amplitude = _reached(plan, needed)
+    _, wanted, allowed = _wanted(plan, history.noise)
+    needed = wanted / history.swing_per_output
+    amplitude = _reached(plan, min(wanted, allowed) / history.swing_per_output)
     swing = history.swing_per_output * amplitude
-    extra = RECENTRED_BIAS * swing + HYSTERESIS_OVER_NOISE * history.noise
+    extra = RECENTRE_SHARE * swing + HYSTERESIS_SIGMAS * history.noise
     return _cost(plan, "history", amplitude, swing, extra, history.period_s, needed)
 
 
+def _wanted(plan: Plan, noise: float) -> tuple[float, float, float]:
+    """Hysteresis, the swing wanted for this noise, and the largest that the experiment allows itself, PV units."""
+    narrowest = min(plan.deviation_up, plan.deviation_down)
+    hysteresis = max(HYSTERESIS_SIGMAS * noise, SMALLEST_HYSTERESIS * narrowest)
+    target = max(TARGET_HYSTERESES * hysteresis, TARGET_SHARE * narrowest)
+    return hysteresis, target, LARGEST_SHARE * narrowest
+
+
 def _reached(plan: Plan, needed: float) -> float:
-    """The amplitude that growing in steps ends at, at worst one step above what is needed."""
+    """The amplitude at which growing from small ends."""
     amplitude = plan.start_amplitude
-    while amplitude < needed and amplitude < plan.max_amplitude:
-        amplitude = min(plan.max_amplitude, amplitude * max(plan.growth, 1.01))
+    while amplitude < NEAR_ENOUGH * needed and amplitude < plan.max_amplitude:
+        amplitude = min(plan.max_amplitude, needed, amplitude * max(plan.growth, 1.01))
     return amplitude
 
 

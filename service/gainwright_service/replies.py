@@ -9,7 +9,18 @@ from gainwright_service.checklist import SignedAnswer, with_answers
 from gainwright_service.checklist.items import NOTICE
 from gainwright_wire.analyses import AnalysisReply, Checklist, Verdict
 from gainwright_wire.base import Wire
-from gainwright_wire.tasks import AsFound, Exit, Experiment, LimitMet, Plan, Progress, StartExperiment, TaskState
+from gainwright_wire.tasks import (
+    AsFound,
+    Exit,
+    Experiment,
+    LimitMet,
+    Phase,
+    Plan,
+    Progress,
+    StartExperiment,
+    StreamProgress,
+    TaskState,
+)
 
 Document = TypeVar("Document", bound=Wire)
 
@@ -56,9 +67,14 @@ def experiment(row: Mapping[str, Any], sign_offs: Mapping[str, SignedAnswer] | N
 def answers_of(request: StartExperiment, person: str) -> dict[str, SignedAnswer]:
     """The answers that a start request carries, signed by the requester."""
     return {
-        item: SignedAnswer(Verdict(answer.verdict), person, answer.reason)
-        for item, answer in request.answers.items()
+        item: SignedAnswer(Verdict(answer.verdict), person, answer.reason) for item, answer in request.answers.items()
     }
+
+
+def progress_now(row: Mapping[str, Any]) -> StreamProgress:
+    """A task's progress and phase as they stand in its row."""
+    progress = known(StreamProgress, row["progress"]) or StreamProgress()
+    return progress.model_copy(update={"phase": Phase(row["phase"]) if row["phase"] else None})
 
 
 def last_analysis(result: Mapping[str, Any] | None) -> AnalysisReply | None:

@@ -151,6 +151,12 @@ class Progress(Wire):
     message: str = ""
 
 
+class StreamProgress(Progress):
+    """Progress as the live stream tells it, with the phase it belongs to."""
+
+    phase: Phase | None = None
+
+
 class LimitMet(Wire):
     """The limit that ended a test: its item of the safety list, the number and the bound."""
 

@@ -6,9 +6,9 @@ import dataclasses
 from typing import Any
 
 import pytest
-from gainwright_service.experiment.plan import Plan
 
 from gainwright_service.errors import PlanRefused
+from gainwright_service.experiment.plan import Plan
 from gainwright_service.planning import check_start, plan_experiment, plan_with_defaults
 from gainwright_wire.tasks import Plan as WirePlan
 from service_loops import a_loop, a_start

@@ -52,7 +52,9 @@ def _plan(**changes: float | int) -> Plan:
 def test_a_guess_gives_the_exact_swing_and_period(
     gain: float, lag: float, dead_time: float, hysteresis: float, swing: float, half_period: float
 ) -> None:
-    predicted = from_guess(_plan(), Guess(gain, lag, dead_time, noise=hysteresis / 3.0))
+    # So narrow a deviation that the experiment would neither grow the relay nor widen the hysteresis beyond the noise.
+    plan = _plan(deviation_up=1e-6, deviation_down=1e-6)
+    predicted = from_guess(plan, Guess(gain, lag, dead_time, noise=hysteresis / 3.0))
     assert predicted.worst_swing == pytest.approx(swing, rel=1e-6)
     assert predicted.period_s == pytest.approx(2 * half_period, rel=1e-6)
 
@@ -63,15 +65,15 @@ def test_a_long_dead_time_does_not_overflow() -> None:
 
 
 def test_noise_beyond_the_largest_amplitude_is_said_with_what_it_needs() -> None:
-    predicted = from_guess(_plan(), Guess(1.0, 10.0, 2.0, noise=1.0))
+    predicted = from_guess(_plan(), Guess(1.0, 10.0, 2.0, noise=0.5))
     assert predicted.no_crossing
     assert predicted.amplitude_needed is not None
     assert predicted.amplitude_needed > 1.0
 
 
 def test_history_scales_the_swing_with_the_amplitude() -> None:
-    predicted = from_history(_plan(start_amplitude=2.0, max_amplitude=4.0), History(0.5, 12.0))
-    assert predicted.worst_swing == pytest.approx(1.0)
+    predicted = from_history(_plan(start_amplitude=2.0, max_amplitude=4.0), History(0.1, 12.0))
+    assert predicted.worst_swing == pytest.approx(0.4)
     assert predicted.period_s == 12.0
 
 

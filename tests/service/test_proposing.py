@@ -155,6 +155,4 @@ def test_the_controllers_own_scan_costs_margin() -> None:
     assert late.margins.phase_margin_deg is not None
     assert fast.margins.phase_margin_deg is not None
     # One second at the gain crossover of 0.25 rad/s.
-    assert fast.margins.phase_margin_deg - late.margins.phase_margin_deg == pytest.approx(
-        math.degrees(0.25), rel=0.02
-    )
+    assert fast.margins.phase_margin_deg - late.margins.phase_margin_deg == pytest.approx(math.degrees(0.25), rel=0.02)

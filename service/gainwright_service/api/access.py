@@ -37,9 +37,7 @@ Key = Annotated[
 ]
 
 
-async def person_of(
-    context: InContext, token: Annotated[HTTPAuthorizationCredentials | None, Depends(_BEARER)]
-) -> str:
+async def person_of(context: InContext, token: Annotated[HTTPAuthorizationCredentials | None, Depends(_BEARER)]) -> str:
     """The person whose token the request carries."""
     if token is None:
         raise Unauthenticated("Authorization: Bearer TOKEN is missing; `gainwright token` makes one")

@@ -157,9 +157,7 @@ async def read_samples(
     if format == "csv":
         name = f"{row['tag']}-{id[:8]}.csv"
         headers = {"Content-Disposition": f'attachment; filename="{name}"'}
-        return StreamingResponse(
-            tabulating.csv_lines(from_number, columns), 200, headers, "text/csv; charset=utf-8"
-        )
+        return StreamingResponse(tabulating.csv_lines(from_number, columns), 200, headers, "text/csv; charset=utf-8")
     document = tabulating.samples_document(from_number, columns)
     return Response(document.model_dump_json(), 200, media_type="application/json")
 

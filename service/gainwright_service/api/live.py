@@ -57,7 +57,7 @@ async def _events(context: Context, task_id: str, first: int) -> AsyncIterator[s
             f"id: {sample.number}\nevent: sample\ndata: {sample.model_dump_json()}\n\n"
             for sample in tabulating.stream_samples(news.first_number, news.columns)
         ]
-        progress = progress_now(news.row)
+        progress = progress_now(news.row).model_dump_json()
         lines.append(f"event: progress\ndata: {progress}\n\n" if progress != told else ": alive\n\n")
         told = progress
         yield "".join(lines)

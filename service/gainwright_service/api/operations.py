@@ -27,9 +27,7 @@ async def live() -> Health:
     "/health/ready",
     operation_id="healthReady",
     response_model=Health,
-    responses={
-        503: {"model": Health, "description": "The store does not answer, or no worker has confirmed lately"}
-    },
+    responses={503: {"model": Health, "description": "The store does not answer, or no worker has confirmed lately"}},
 )
 async def ready(context: InContext) -> Response:
     """Whether the store answers and every known site's worker has confirmed within five seconds."""

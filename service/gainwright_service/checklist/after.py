@@ -60,9 +60,7 @@ def measure_during(plan: Plan, end: Conclusion) -> dict[str, Measurement]:
     inside = plan.process_variable_low <= end.lowest and end.highest <= plan.process_variable_high
     found = {
         "D1": judge("D1", end.worst_deviation / allowed),
-        "D2": Measurement(
-            Verdict.PASS if inside else Verdict.FAIL, detail=f"{end.lowest:.4g} to {end.highest:.4g}"
-        ),
+        "D2": Measurement(Verdict.PASS if inside else Verdict.FAIL, detail=f"{end.lowest:.4g} to {end.highest:.4g}"),
         "D5": _commands(plan, end),
         "D6": Measurement(Verdict.PASS),
         "D7": Measurement(Verdict.PASS),

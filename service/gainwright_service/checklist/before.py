@@ -112,9 +112,7 @@ def _watchdog(loop: Loop, *, attended: bool) -> Measurement:
     beat = heartbeat_of(loop)
     if beat is None or beat.watchdog is WatchdogAction.NONE:
         if loop.loop_class is LoopClass.BENCH and attended:
-            return Measurement(
-                Verdict.CAUTION, detail="no device watchdog: a dead service leaves the output driven"
-            )
+            return Measurement(Verdict.CAUTION, detail="no device watchdog: a dead service leaves the output driven")
         return Measurement(Verdict.FAIL, detail="no device watchdog")
     if beat.watchdog is WatchdogAction.HOLD_LAST:
         return Measurement(

@@ -22,8 +22,7 @@ NOTICE = (
 )
 
 BENCH_SENTENCE = (
-    "Worst case, the output stays anywhere in its band until somebody notices: nothing is damaged and nobody is "
-    "hurt."
+    "Worst case, the output stays anywhere in its band until somebody notices: nothing is damaged and nobody is hurt."
 )
 
 
@@ -226,8 +225,7 @@ _BEFORE = (
     Item(
         "B19",
         "before",
-        "Is the state of cascade, override and feedforward known, and is an outer loop out of "
-        "cascade and following?",
+        "Is the state of cascade, override and feedforward known, and is an outer loop out of cascade and following?",
         "Take the outer loop out of cascade.",
     ),
     Item(
@@ -310,9 +308,7 @@ _DURING = (
         starred=True,
         bench=True,
     ),
-    Item(
-        "D6", "during", "Did nobody else act on the loop?", "Agree on who has the loop.", starred=True, bench=True
-    ),
+    Item("D6", "during", "Did nobody else act on the loop?", "Agree on who has the loop.", starred=True, bench=True),
     Item("D7", "during", "Did every reading arrive in time?", "Mend the link.", bench=True),
     Item(
         "D8",
@@ -414,9 +410,7 @@ _AFTER = (
         "Did a second person read form, units, action and ranges back from the controller?",
         "Have them read aloud at the faceplate.",
     ),
-    Item(
-        "A10", "after", "Were the gains entered in manual or near setpoint, with no bump?", "Enter them in manual."
-    ),
+    Item("A10", "after", "Were the gains entered in manual or near setpoint, with no bump?", "Enter them in manual."),
     Item(
         "A11",
         "after",

@@ -33,9 +33,7 @@ def measure_record(
     if analysis.swing > 0:
         found["B12"] = _clear_of_noise(plan, analysis, quantum)
     model = analysis.model
-    gain = (
-        None if model is None else (model.static_gain if model.static_gain is not None else model.integrating_gain)
-    )
+    gain = None if model is None else (model.static_gain if model.static_gain is not None else model.integrating_gain)
     if gain is not None:
         agrees = (gain > 0) == (loop.output_effect == "raises")
         found["B14"] = Measurement(
@@ -44,9 +42,7 @@ def measure_record(
         )
     friction = [f for f in analysis.findings if f.name in _FINAL_ELEMENT]
     if friction:
-        found["B15"] = Measurement(
-            worst(f.verdict for f in friction), detail="; ".join(f.sentence for f in friction)
-        )
+        found["B15"] = Measurement(worst(f.verdict for f in friction), detail="; ".join(f.sentence for f in friction))
     return found
 
 
