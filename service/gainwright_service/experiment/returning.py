@@ -1,0 +1,192 @@
+"""The way out: the exit output, its proof, and the mode as found. Owned by the machine, pure like it.
+
+Order (safety document, section 2.3): exit output first; its echo on two readings; where the loop was found in
+automatic, the return band or the return time; the setpoint as found; the mode; its proof and the output's jump.
+After a failed exchange the device is read before it is written again.
+"""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+
+from gainwright_service.experiment.commands import Command, Facts, HandBack, WriteExit
+from gainwright_service.experiment.plan import Plan
+from gainwright_service.experiment.readings import Mode, Reading
+from gainwright_service.experiment.states import Exit
+
+PROOFS = 2
+SCANS = 3
+JUMP_SHARE = 0.02
+BAND_SHARE = 0.25
+
+
+@dataclass(frozen=True, slots=True)
+class Ending:
+    """How the exit came out, for a person."""
+
+    exit: Exit
+    detail: str
+
+
+Step = tuple[tuple[Command, ...], Ending | None]
+"""What to do now, and the ending once it is known."""
+NOTHING: Step = ((), None)
+
+
+@dataclass(slots=True)
+class Return:
+    """One way out, from the moment the test ends.
+
+    Parameters
+    ----------
+    plan : Plan
+    facts : Facts
+    began_at : float
+    exit_output : float
+    issued : float
+        The output last asked for.
+    levels : tuple of float
+        Outputs that may still be in force as ours.
+    amplitude : float
+    restore : bool
+        Whether the mode as found is to be restored.
+    read_first : bool
+    """
+
+    plan: Plan
+    facts: Facts
+    began_at: float
+    exit_output: float
+    issued: float
+    levels: tuple[float, ...]
+    amplitude: float
+    restore: bool
+    read_first: bool = False
+    exit_asked: bool = False
+    written_at: float = 0.0
+    repeats: int = 0
+    proofs: int = 0
+    restoring: bool = False
+    asked_mode_at: float = 0.0
+    mode_repeats: int = 0
+    scans: int = 0
+
+    def begin(self, now: float) -> tuple[Command, ...]:
+        """The first exit command, unless the device must be read first."""
+        return () if self.read_first else self._write(now)
+
+    def settle(self, now: float, reading: Reading) -> Step:
+        """One reading while the exit output is being proven."""
+        if self.read_first:
+            if not self._ours(reading):
+                return (), Ending(Exit.NOT_OURS, "the loop is not as we left it: nothing was written")
+            self.read_first = False
+            return self._write(now), None
+        if self.issued != self.exit_output:
+            return self._write(now), None
+        if reading.controller_output is None:
+            if now - self.written_at > self.plan.settle_s:
+                return (), Ending(Exit.UNVERIFIED, f"exit output {self.exit_output:g} written; no echo to verify it")
+            return NOTHING
+        if abs(reading.controller_output - self.exit_output) > self.plan.echo_tolerance:
+            return self._not_obeyed(now, reading.controller_output)
+        self.proofs += 1
+        if self.proofs < PROOFS:
+            return NOTHING
+        return self._proven(now, reading)
+
+    def verify(self, now: float, reading: Reading) -> Step:
+        """One reading after the mode as found was asked for."""
+        if reading.mode is not self.facts.mode:
+            if now - self.asked_mode_at <= self.plan.settle_s:
+                return NOTHING
+            if self.mode_repeats == 0 and reading.mode is Mode.MANUAL:
+                self.mode_repeats += 1
+                self.asked_mode_at = now
+                return (HandBack(self.facts.mode),), None
+            return (), Ending(Exit.UNVERIFIED, f"the mode {self.facts.mode} was not restored: left in {reading.mode}")
+        jump = abs((reading.controller_output or self.exit_output) - self.exit_output)
+        most = max(JUMP_SHARE * self.plan.output_span, self.amplitude)
+        if jump > most:
+            return (), Ending(Exit.UNVERIFIED, f"the output moved by {jump:.3g} on hand-back, more than {most:.3g}")
+        self.scans += 1
+        if self.scans < SCANS:
+            return NOTHING
+        return (), Ending(Exit.VERIFIED, f"output {self.exit_output:g}, then mode {self.facts.mode} as found")
+
+    def missed(self, now: float) -> Step:
+        """A reading failed: from now on read before writing, for as long as patience lasts."""
+        if not self.restoring:
+            self.read_first = True
+            self.proofs = 0
+        if now - self.began_at <= self.plan.link_patience_s:
+            return NOTHING
+        if self.exit_asked:
+            return (), Ending(Exit.UNVERIFIED, "exit asked for, but the link was lost before it could be verified")
+        return (), Ending(Exit.NOT_WRITTEN, "the link was lost: the output is left to the device's own watchdog")
+
+    def failed(self, now: float) -> Step:
+        """An exit write failed."""
+        return self.missed(now)
+
+    def _write(self, now: float) -> tuple[Command, ...]:
+        rate = self.plan.output_rate_per_s
+        step = self.exit_output - self.issued
+        if rate is not None and self.exit_asked:
+            most = rate * max(now - self.written_at, self.plan.sample_interval_s)
+            step = max(-most, min(most, step))
+        elif rate is not None:
+            most = rate * self.plan.sample_interval_s
+            step = max(-most, min(most, step))
+        self.issued = self.exit_output if step == self.exit_output - self.issued else self.issued + step
+        self.exit_asked = True
+        self.written_at = now
+        self.proofs = 0
+        self.levels = (*self.levels[-3:], self.issued)
+        return (WriteExit(self.issued),)
+
+    def _not_obeyed(self, now: float, echo: float) -> Step:
+        self.proofs = 0
+        if now - self.written_at <= self.plan.settle_s:
+            return NOTHING
+        if self.repeats == 0:
+            self.repeats += 1
+            return self._write(now), None
+        return (), Ending(Exit.UNVERIFIED, f"the device does not take the exit output {self.exit_output:g}: {echo:g}")
+
+    def _proven(self, now: float, reading: Reading) -> Step:
+        at = f"output {self.exit_output:g}, echoed"
+        if not self.restore:
+            if self.facts.mode in (Mode.AUTOMATIC, Mode.CASCADE):
+                return (), Ending(Exit.UNVERIFIED, f"{at}; left in manual at {self.exit_output:g}, found in "
+                                  f"{self.facts.mode}")  # fmt: skip
+            return (), Ending(Exit.VERIFIED, at)
+        deviation = reading.process_variable - self.facts.reference
+        bound = self.plan.deviation_up if deviation >= 0 else self.plan.deviation_down
+        if abs(deviation) > BAND_SHARE * bound and now - self.began_at <= self.plan.return_time_s:
+            return NOTHING
+        if self._setpoint_differs(reading):
+            return (), Ending(Exit.UNVERIFIED, f"{at}; left in manual: the setpoint is {reading.setpoint:g}, found "
+                              f"{self.facts.setpoint:g}")  # fmt: skip
+        self.restoring = True
+        self.asked_mode_at = now
+        return (HandBack(self.facts.mode),), None
+
+    def _setpoint_differs(self, reading: Reading) -> bool:
+        found, now = self.facts.setpoint, reading.setpoint
+        if found is None or now is None:
+            return False
+        span = self.plan.process_variable_high - self.plan.process_variable_low
+        return abs(now - found) > 1e-5 * max(span, abs(found))
+
+    def _ours(self, reading: Reading) -> bool:
+        if reading.mode not in (Mode.MANUAL, Mode.UNKNOWN):
+            return False
+        if reading.controller_output is None:
+            return not self.plan.reads_output
+        ours = [*self.levels, self.exit_output]
+        if self.plan.watchdog == "resting":
+            ours.append(self.facts.resting_output)
+        elif self.plan.watchdog == "fixed" and self.plan.watchdog_value is not None:
+            ours.append(self.plan.watchdog_value)
+        return any(abs(reading.controller_output - level) <= self.plan.ownership_tolerance for level in ours)
