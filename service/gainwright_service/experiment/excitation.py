@@ -19,7 +19,9 @@ TARGET_SHARE = 0.15
 LARGEST_SHARE = 0.45
 """Shares of the allowed deviation: the least swing wanted of a quiet loop, the most a forecast may reach."""
 NEAR_ENOUGH = 0.75
-TOO_LARGE = 1.6
+TOO_LARGE = 1.1
+"""A swing this far above the largest one that was forecast is cut back; a merely larger one than wanted is kept, since
+it carries more information."""
 RECENTRE_SHARE = 0.25
 BALANCED = 0.05
 """Imbalance of the half-periods that is left alone."""
@@ -34,6 +36,7 @@ class Excitation:
     amplitude: float
     bias: float
     target_swing: float
+    largest_swing: float
     largest_amplitude: float
 
     def grown(self) -> Excitation:
@@ -47,8 +50,8 @@ class Excitation:
         ratio = self.target_swing / swing
         if ratio > 1 / NEAR_ENOUGH:
             return self._sized(self.amplitude * min(ratio, self.plan.growth))
-        if ratio < 1 / TOO_LARGE:
-            return self._sized(self.amplitude * max(ratio, 1 / self.plan.growth))
+        if swing > TOO_LARGE * self.largest_swing:
+            return self._sized(self.amplitude * max(self.largest_swing / swing, 1 / self.plan.growth))
         return self
 
     def recentred(self, cycle: Cycle) -> Excitation:
@@ -78,9 +81,7 @@ class Excitation:
             self.bias - plan.output_low,
             plan.output_high - self.bias,
         )
-        return replace(
-            self, amplitude=max(min(amplitude, room), min(self.amplitude, room)) if room > 0 else self.amplitude
-        )
+        return replace(self, amplitude=min(amplitude, room)) if room > 0 else self
 
 
 def starting(plan: Plan, facts: Facts) -> Excitation:
@@ -99,5 +100,6 @@ def starting(plan: Plan, facts: Facts) -> Excitation:
         amplitude=min(plan.start_amplitude, room),
         bias=facts.resting_output,
         target_swing=min(wanted, LARGEST_SHARE * narrowest),
+        largest_swing=LARGEST_SHARE * narrowest,
         largest_amplitude=room,
     )

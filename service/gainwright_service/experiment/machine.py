@@ -169,15 +169,14 @@ class Machine:
     def _swing(self, event: Sampled) -> Commands:
         if self._law is None or self._excitation is None:
             return self._astray(event)
-        deviation = (event.reading.process_variable - self._law.reference) * self._law.effect
+        deviation = event.reading.process_variable - self._law.reference
         self.worst_deviation = max(self.worst_deviation, abs(deviation))
         self._extreme = min(self._extreme, deviation) if self._side is Side.UP else max(self._extreme, deviation)
         if self.state is State.PROBING and self._wrong_sign(deviation):
             trip = Trip("B14", deviation, 0.0, "", "output and process variable move against the declared effect")
             return self._leave(event.now, Outcome.LIMITED, trip)
-        signed = self._law.reference + deviation
         dwelt = event.now - self._side_since >= self.plan.min_dwell_s
-        if dwelt and self._law.next_side(self._side, signed) is not self._side:
+        if dwelt and self._law.next_side(self._side, event.reading.process_variable) is not self._side:
             return self._switch(event.now, event.reading)
         if self.switches == 0:
             unanswered = self._grow_if_unanswered(event.now)
@@ -194,11 +193,8 @@ class Machine:
         self.switches += 1
         self.state = State.SWINGING
         if self.switches >= 2:
-            resized = excitation.matched(abs(half.extreme))
-            if resized.amplitude != excitation.amplitude:
-                cycle = None
-            self._excitation = resized
-        if cycle is not None and self._excitation is excitation:
+            self._excitation = excitation.matched(abs(half.extreme))
+        if cycle is not None and self._excitation == excitation:
             if self._enough():
                 return self._leave(now, Outcome.COMPLETED, None)
             self._excitation = excitation.recentred(cycle)
