@@ -10,7 +10,7 @@ from typing import Any
 
 import numpy as np
 
-from gainwright import Record, analyse
+import gainwright
 from gainwright.errors import GainwrightError
 from gainwright.results import Analysis
 from gainwright_service.checklist import (
@@ -112,12 +112,12 @@ def analyse_upload(document: dict[str, Any]) -> dict[str, Any]:
     """
     upload = RecordUpload.model_validate(document)
     try:
-        record = Record(
+        record = gainwright.Record(
             time=upload.time_s,
             process_variable=upload.process_variable,
             controller_output=upload.controller_output,
         )
-        analysis = analyse(
+        analysis = gainwright.analyse(
             record,
             reference=upload.reference,
             hysteresis=upload.hysteresis,
@@ -147,12 +147,12 @@ def _analysed(
     in_force = np.where(np.isfinite(commanded), commanded, columns["controller_output"])
     usable = tested & np.isfinite(in_force) & np.isfinite(columns["process_variable"])
     try:
-        record = Record(
+        record = gainwright.Record(
             time=columns["time_s"][usable],
             process_variable=columns["process_variable"][usable],
             controller_output=in_force[usable],
         )
-        analysis = analyse(
+        analysis = gainwright.analyse(
             record,
             reference=as_found.reference if as_found is not None else None,
             hysteresis=progress.hysteresis,

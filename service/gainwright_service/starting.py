@@ -11,34 +11,45 @@ from typing import Any
 from sqlalchemy.ext.asyncio import AsyncConnection
 
 from gainwright_service.checklist import Start, assemble, blocking, measure_before
-from gainwright_service.errors import ChecklistFailed
+from gainwright_service.errors import ChecklistFailed, NoWorker
 from gainwright_service.forecasting import predict
 from gainwright_service.planning import check_start, plan_with_defaults
 from gainwright_service.replies import answers_of, last_analysis
-from gainwright_service.store import loops, tasks
+from gainwright_service.store import loops, sites, tasks
 from gainwright_wire.analyses import AnalysisReply, Checklist, Verdict
 from gainwright_wire.loops import Loop
 from gainwright_wire.problems import FieldProblem
 from gainwright_wire.tasks import ForecastRequest, StartExperiment
 
+WORKER_MISSED_S = 10.0
+"""A worker confirms its site each second; a restart takes a few."""
+
 
 async def start_experiment(
-    connection: AsyncConnection, tag: str, request: StartExperiment, *, by: str, at: str
+    connection: AsyncConnection, tag: str, request: StartExperiment, *, by: str, at: str, now_s: float
 ) -> Mapping[str, Any]:
     """Queue an experiment on a loop; returns the task's row.
 
     Raises
     ------
-    NotFound, PlanRefused, SafetyFunctionRefused, ChecklistFailed
+    NotFound, NoWorker, PlanRefused, SafetyFunctionRefused, ChecklistFailed
     LoopBusy, GroupBusy, ExitNotAcknowledged
     """
     kept = await loops.get(connection, tag)
+    await _require_worker(connection, kept.loop.site, now_s)
     last = last_analysis(await tasks.last_result(connection, tag))
     check_start(kept.loop, request, requested_by=by)
     refuse_blocked(sheet_at_start(kept.loop, request, by, last))
     document = request.model_dump(mode="json")
     task_id = await tasks.create(connection, kind="experiment", loop=kept.loop, request=document, by=by, at=at)
     return await tasks.get(connection, task_id)
+
+
+async def _require_worker(connection: AsyncConnection, site: str, now_s: float) -> None:
+    confirmed_at = (await sites.confirmations(connection)).get(site)
+    if confirmed_at is None or now_s - confirmed_at > WORKER_MISSED_S:
+        since = "none serves it" if confirmed_at is None else f"the last word came {now_s - confirmed_at:.0f} s ago"
+        raise NoWorker(f"site: no worker of '{site}' is there to run the test ({since}); nothing was queued")
 
 
 def sheet_at_start(loop: Loop, request: StartExperiment, by: str, last: AnalysisReply | None) -> Checklist:

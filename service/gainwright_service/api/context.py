@@ -2,15 +2,23 @@
 
 from __future__ import annotations
 
+from collections.abc import Callable
 from dataclasses import dataclass
-from typing import Annotated
+from typing import Annotated, Any, Protocol
 
 from fastapi import Depends, Request
 from sqlalchemy.ext.asyncio import AsyncEngine
 
-from gainwright_service.analysis_pool import AnalysisPool
 from gainwright_service.api.following import Follower
 from gainwright_service.clock import Clock
+
+
+class Analyses(Protocol):
+    """Where analyses run: never in the process that serves."""
+
+    async def run(self, function: Callable[..., Any], *arguments: Any) -> Any:
+        """The function's result; its errors are raised."""
+        ...
 
 
 @dataclass(frozen=True, slots=True)
@@ -21,20 +29,24 @@ class Context:
     ----------
     engine : AsyncEngine
     clock : Clock
-    pool : AnalysisPool
-        Analyses of uploaded records run here, never in the process that serves.
+    analyses : Analyses
+        Analyses of uploaded records run here.
     follower : Follower
         The one reader of new samples.
     """
 
     engine: AsyncEngine
     clock: Clock
-    pool: AnalysisPool
+    analyses: Analyses
     follower: Follower
 
     def now(self) -> str:
         """The civil time as people read it, ISO 8601 in UTC."""
         return self.clock.wall_time().isoformat(timespec="milliseconds")
+
+    def now_s(self) -> float:
+        """The civil time in seconds since the epoch, as sites are confirmed by."""
+        return self.clock.wall_time().timestamp()
 
 
 def context_of(request: Request) -> Context:

@@ -60,9 +60,7 @@ async def start(tag: InTag, request: StartExperiment, change: InChange) -> Respo
     """Start a relay test. It is queued for the site's worker; follow it under `Location`."""
 
     async def act(connection: AsyncConnection, at: str) -> Reply:
-        row = await start_experiment(
-            connection, tag, request, by=change.person, at=at, now=change.context.clock.wall_time()
-        )
+        row = await start_experiment(connection, tag, request, by=change.person, at=at, now_s=change.context.now_s())
         return Reply(202, experiment(row), {"Location": f"/v1/experiments/{row['id']}"})
 
     return await change(act)

@@ -68,7 +68,7 @@ async def docs(request: Request) -> HTMLResponse:
 
 
 async def _readiness(context: Context) -> Health:
-    now = context.clock.wall_time().timestamp()
+    now = context.now_s()
     try:
         async with context.engine.connect() as connection:
             known = await sites.confirmations(connection)

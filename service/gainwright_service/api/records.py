@@ -32,7 +32,7 @@ async def analyse_record(upload: RecordUpload, change: InChange) -> Response:
     if kept is not None:
         return kept
     document = upload.model_dump(mode="python")
-    analysis = await change.context.pool.run(analyse_upload, document)
+    analysis = await change.context.analyses.run(analyse_upload, document)
 
     async def act(connection: AsyncConnection, at: str) -> Reply:
         stored = await records.keep(connection, upload, analysis, by=change.person, at=at)

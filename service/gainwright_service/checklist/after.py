@@ -71,8 +71,9 @@ def measure_during(plan: Plan, end: Conclusion) -> dict[str, Measurement]:
     ended_by = _OUTCOME_ITEMS.get(end.outcome)
     if ended_by is not None:
         found[ended_by] = Measurement(Verdict.FAIL, detail=end.exit_detail)
-    if end.limit is not None and end.limit.item in found:
-        met = end.limit
+    met = end.limit
+    if met is not None:
+        # Listening may end a test by a before-item as well: the loop was not fit to be tested.
         found[met.item] = Measurement(Verdict.FAIL, met.number, met.bound, met.sentence or "ended the test")
     return found
 
