@@ -134,7 +134,8 @@ def _amplitude(loop: Loop, plan: Plan) -> Measurement:
 
 
 def _switches(plan: Plan, predicted: Prediction | None) -> Measurement:
-    planned = predicted.switches if predicted is not None else planned_switches(plan)
+    known = predicted is not None and predicted.basis != "limits"
+    planned = predicted.switches if predicted is not None and known else planned_switches(plan)
     result = judge("B10", 100.0 * planned / plan.max_switches, f"{planned} of {plan.max_switches}")
     period = predicted.period_s if predicted is not None else None
     if period is not None and plan.min_dwell_s > period / 2:
