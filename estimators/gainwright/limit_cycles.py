@@ -2,8 +2,8 @@
 
 Owns the closed forms for first-order and integrating processes with dead time and the half-period condition of
 any rational process with dead time. Strategy of the latter: in a symmetric limit cycle the state repeats with
-opposite sign after half a period, which leaves one equation in the half-period; its largest root is the cycle that
-a test started from rest settles in.
+opposite sign after half a period, which leaves one equation in the half-period. It is scanned from far above every
+time of the process downwards, since the longest solution is the cycle that a test started from rest settles in.
 """
 
 from __future__ import annotations
@@ -12,16 +12,25 @@ import math
 from dataclasses import dataclass
 
 import numpy as np
+import numpy.typing as npt
 from scipy.optimize import brentq
 
 from gainwright.errors import NoCrossover, NoLimitCycle, OutOfDomain
 from gainwright.margins import ultimate_point
 from gainwright.models import TransferFunction
-from gainwright.simulation import Realisation
+from gainwright.phase import UnwrappedPhase
+from gainwright.realisation import Realisation
 
-SEARCHED_PERIODS = 12.0
-"""Half-periods are sought up to this many times the process's own ultimate period."""
-SEARCH_POINTS = 600
+FloatArray = npt.NDArray[np.float64]
+
+LONGEST_IN_LAGS = 40.0
+"""The scan starts at this many times the sum of lags and dead time, where every transient has died out."""
+SCAN_RATIO = 0.88
+COARSE_SCAN_RATIO = 0.7
+"""Ratio above the ultimate period, where solutions come from hysteresis and lie far apart."""
+SHORTEST_IN_ULTIMATE_PERIODS = 0.02
+SHORTEST_IN_LAGS = 1e-5
+WAVE_POINTS = 128
 
 
 @dataclass(frozen=True, slots=True)
@@ -67,8 +76,10 @@ def first_order_limit_cycle(
     ----------
     static_gain : float, PV units per output unit, > 0
         Symbol K.
-    time_constant, dead_time : float, seconds, > 0
-        Symbols T, L.
+    time_constant : float, seconds, > 0
+        Symbol T.
+    dead_time : float, seconds, >= 0
+        Symbol L; above 0 without hysteresis.
     amplitude : float, output units, > 0
         Symbol d.
     hysteresis : float, PV units, >= 0
@@ -83,24 +94,27 @@ def first_order_limit_cycle(
     Raises
     ------
     NoLimitCycle
-        Unless ``(d - abs(mu0)) K > eps``.
+        Unless ``(d - abs(mu0)) K > eps``, and without both dead time and hysteresis.
+    OutOfDomain
 
     Notes
     -----
     Source: Wang, Hang & Zou, Ind. Eng. Chem. Res. 36(2):375-381, 1997 (equations from memory, verified by
     simulation in the tests).
     """
-    _all_positive(static_gain=static_gain, time_constant=time_constant, dead_time=dead_time, amplitude=amplitude)
+    _all_positive(static_gain=static_gain, time_constant=time_constant, amplitude=amplitude)
+    _delays(dead_time, hysteresis)
+    _finite("bias", bias)
     k, t, d, e, mu = static_gain, time_constant, amplitude, hysteresis, bias
     if not (d - abs(mu)) * k > e:
         raise NoLimitCycle("amplitude", "cannot carry the process through the hysteresis", "(d - abs(bias)) K > eps")
     decay = math.exp(-dead_time / t)
-    grow = 2.0 * d * k * math.exp(dead_time / t)
     return LimitCycle(
         highest=(mu + d) * k * (1 - decay) + e * decay,
         lowest=(mu - d) * k * (1 - decay) - e * decay,
-        time_up=t * math.log((grow + mu * k - d * k + e) / (d * k + mu * k - e)),
-        time_down=t * math.log((grow - mu * k - d * k + e) / (d * k - mu * k - e)),
+        # The published logarithm with exp(L/T) taken out of it, which would overflow for a long dead time.
+        time_up=dead_time + t * math.log((2 * d * k + (mu * k - d * k + e) * decay) / (d * k + mu * k - e)),
+        time_down=dead_time + t * math.log((2 * d * k - (mu * k + d * k - e) * decay) / (d * k - mu * k - e)),
     )
 
 
@@ -113,7 +127,8 @@ def integrating_limit_cycle(
     ----------
     integrating_gain : float, PV units per output unit and second, > 0
         Symbol Kv.
-    dead_time : float, seconds, > 0
+    dead_time : float, seconds, >= 0
+        Symbol L; above 0 without hysteresis.
     up, down : float, output units, > 0
         Symbols d1, d2.
     hysteresis : float, PV units, >= 0
@@ -123,11 +138,18 @@ def integrating_limit_cycle(
     -------
     LimitCycle
 
+    Raises
+    ------
+    NoLimitCycle
+        Without both dead time and hysteresis.
+    OutOfDomain
+
     Notes
     -----
     Derived; verified by simulation in the tests. ``d1 Ton = d2 Toff`` for any integrating process.
     """
-    _all_positive(integrating_gain=integrating_gain, dead_time=dead_time, up=up, down=down)
+    _all_positive(integrating_gain=integrating_gain, up=up, down=down)
+    _delays(dead_time, hysteresis)
     kv, lag, e = integrating_gain, dead_time, hysteresis
     return LimitCycle(
         highest=e + kv * up * lag,
@@ -155,8 +177,18 @@ def first_order_from_limit_cycle(
     -------
     tuple of float
         T, L in seconds.
+
+    Raises
+    ------
+    OutOfDomain
+        Where no first-order process has this limit cycle.
     """
     k, d, e, mu = static_gain, amplitude, hysteresis, bias
+    _all_positive(static_gain=k, amplitude=d, time_up=cycle.time_up)
+    if not (mu + d) * k > cycle.highest > e:
+        raise OutOfDomain(
+            "cycle.highest", f"is {cycle.highest:g}", f"above eps {e:g} and below the final value {(mu + d) * k:g}"
+        )
     ratio = math.log(((mu + d) * k - e) / ((mu + d) * k - cycle.highest))
     shape = (2.0 * d * k * math.exp(ratio) + mu * k - d * k + e) / (d * k + mu * k - e)
     time_constant = cycle.time_up / math.log(shape)
@@ -182,7 +214,15 @@ def integrating_from_limit_cycle(
     -------
     tuple of float
         Kv (PV units per output unit and second), L (seconds).
+
+    Raises
+    ------
+    OutOfDomain
+        Where no integrating process has this limit cycle.
     """
+    _all_positive(up=up, down=down, time_up=cycle.time_up, swing=cycle.swing)
+    if not 0 <= hysteresis < cycle.swing:
+        raise OutOfDomain("hysteresis", f"is {hysteresis}", f"0 or more and below the swing {cycle.swing:g}")
     integrating_gain = (cycle.highest - cycle.lowest) / (up * cycle.time_up)
     dead_time = (up * cycle.time_up - 2 * hysteresis / integrating_gain) / (up + down)
     return integrating_gain, dead_time
@@ -191,14 +231,15 @@ def integrating_from_limit_cycle(
 def symmetric_limit_cycle(process: TransferFunction, amplitude: float, *, hysteresis: float = 0.0) -> LimitCycle:
     """Limit cycle of any rational process with dead time under a symmetric relay, exact.
 
-    With ``x' = A x + B u``, ``Phi = exp(A h)`` and ``Gamma`` the response over half a period h, the state at the
-    switch up is ``-(I + Phi)^-1 Gamma d``; h solves ``y(h) = -eps`` at the switching instant. The largest root is
-    taken: shorter ones exist for dead-time-dominant processes and are not reached from rest.
+    With ``x' = A x + B u``, ``Phi = exp(A h)`` and ``Gamma`` the answer to a unit input over half a period h, the
+    state at the switch up is ``-(I + Phi)^-1 Gamma d``; h solves ``y = -eps`` at the switching instant. The longest
+    such h in which the relay does not switch earlier is taken: shorter ones exist for dead-time-dominant processes
+    and are not reached from rest.
 
     Parameters
     ----------
     process : TransferFunction
-        Positive low-frequency gain.
+        Stable or integrating, strictly proper; the sign of its gain is taken out, as the relay's effect does.
     amplitude : float, output units, > 0
     hysteresis : float, PV units, >= 0
         Half-width.
@@ -210,6 +251,7 @@ def symmetric_limit_cycle(process: TransferFunction, amplitude: float, *, hyster
     Raises
     ------
     NoLimitCycle
+    OutOfDomain
 
     Notes
     -----
@@ -217,68 +259,110 @@ def symmetric_limit_cycle(process: TransferFunction, amplitude: float, *, hyster
     (from memory, verified by simulation in the tests).
     """
     _all_positive(amplitude=amplitude)
-    realisation = Realisation(process)
-    longest = SEARCHED_PERIODS * _time_scale(process)
-    halves = np.geomspace(longest, longest / 2000, SEARCH_POINTS)
-    values = np.array([_switching_value(process, realisation, h, amplitude) + hysteresis for h in halves])
-    for k in range(halves.size - 1):
-        if np.isfinite(values[k]) and np.isfinite(values[k + 1]) and values[k] < 0 <= values[k + 1]:
-            half = float(
-                brentq(
-                    lambda h: _switching_value(process, realisation, h, amplitude) + hysteresis,
-                    halves[k + 1],
-                    halves[k],
-                    rtol=1e-14,
-                )
-            )
-            highest = _highest(process, realisation, half, amplitude)
-            return LimitCycle(highest, -highest, half, half)
+    _finite("hysteresis", hysteresis)
+    if hysteresis < 0:
+        raise OutOfDomain("hysteresis", f"is {hysteresis}", "0 or more")
+    cycle = _SymmetricCycle(process, amplitude, hysteresis)
+    half, fine_below, shortest = _scanned(process, amplitude, hysteresis)
+    excess = cycle.excess(half)
+    if excess >= 0:
+        raise NoLimitCycle("hysteresis", "is not passed by static gain times amplitude", "K d above eps")
+    while half > shortest:
+        following = half * (SCAN_RATIO if half < fine_below else COARSE_SCAN_RATIO)
+        excess, before = cycle.excess(following), excess
+        if before < 0 <= excess:
+            found = float(brentq(cycle.excess, following, half, xtol=1e-300, rtol=1e-14))
+            if cycle.switches_once(found):
+                highest = cycle.highest(found)
+                return LimitCycle(highest, -highest, found, found)
+        half = following
     raise NoLimitCycle("process", "no half-period meets the switching condition", "phase lag above 180 degrees")
 
 
-def _time_scale(process: TransferFunction) -> float:
+class _SymmetricCycle:
+    """The process's answer to a square wave of any half-period, going up at time 0."""
+
+    def __init__(self, process: TransferFunction, amplitude: float, hysteresis: float) -> None:
+        self._realisation = Realisation(process)
+        if self._realisation.feedthrough:
+            raise OutOfDomain("process", "follows its input at once", "a strictly proper transfer function")
+        self._dead_time = process.dead_time
+        self._drive = amplitude * UnwrappedPhase(process).sign
+        self._hysteresis = hysteresis
+
+    def excess(self, half: float) -> float:
+        """The process variable less minus eps at the switch up: 0 where ``half`` is a limit cycle's half-period."""
+        turns, rest = divmod(self._dead_time, half)
+        # One dead time ago the square wave was an odd or even number of half-periods further back.
+        value = float(self._wave(half, half - rest, half - rest, 1)[0])
+        return (value if int(turns) % 2 else -value) + self._hysteresis
+
+    def switches_once(self, half: float) -> bool:
+        """Whether the process variable stays below plus eps until the half-period is over."""
+        lags = np.linspace(0.0, half, WAVE_POINTS, endpoint=False)
+        turns, at = np.divmod(lags + self._dead_time, half)
+        values = self._wave(half, 0.0, half, WAVE_POINTS) * np.where(turns % 2, -1.0, 1.0)
+        inside = (at > 0.02 * half) & (at < 0.95 * half)
+        return bool(np.all(values[inside] <= self._hysteresis + 1e-9 * np.max(np.abs(values))))
+
+    def highest(self, half: float) -> float:
+        """Largest size of the process variable, polished on ever finer grids."""
+        low, high = 0.0, half
+        for _ in range(6):
+            values = np.abs(self._wave(half, low, high, 32))
+            step, k = (high - low) / 32, int(np.argmax(values))
+            low, high = max(low + (k - 1) * step, 0.0), min(low + (k + 1) * step, half)
+        return float(values[k])
+
+    def _wave(self, half: float, low: float, high: float, points: int) -> FloatArray:
+        """The undelayed answer at ``points`` times from ``low``, evenly to before ``high``, all in [0, half]."""
+        transition, gain = self._realisation.exponential(half)
+        identity = np.eye(self._realisation.order)
+        state = -np.linalg.solve(identity + transition, gain * self._drive)
+        transition, gain = self._realisation.exponential(low)
+        state = transition @ state + gain * self._drive
+        values = np.empty(points)
+        if points > 1:
+            transition, gain = self._realisation.exponential((high - low) / points)
+        for k in range(points):
+            values[k] = self._realisation.output_vector @ state
+            state = transition @ state + gain * self._drive
+        return values
+
+
+def _scanned(process: TransferFunction, amplitude: float, hysteresis: float) -> tuple[float, float, float]:
+    """Where the scan of half-periods starts, becomes fine, and ends, seconds."""
+    phase = UnwrappedPhase(process)
+    if phase.unstable or phase.origin_poles > 1:
+        raise OutOfDomain("process", "does not come to rest or to a steady slope", "a stable or integrating process")
+    lags = float(np.sum(1.0 / phase.rates)) + process.dead_time
+    longest = LONGEST_IN_LAGS * lags
+    if phase.origin_poles == 1:
+        slope = abs(np.trim_zeros(process.numerator, "b")[-1] / np.trim_zeros(process.denominator, "b")[-1])
+        longest += LONGEST_IN_LAGS * hysteresis / (slope * amplitude)
     try:
-        return ultimate_point(process)[1]
-    except NoCrossover:
-        roots = np.abs(np.roots(process.denominator))
-        return 10.0 / float(min(roots[roots > 0], default=1.0)) + process.dead_time
-
-
-def _start_state(realisation: Realisation, half: float, amplitude: float) -> np.ndarray:
-    """State when the process's input goes up, in the symmetric cycle of half-period ``half``."""
-    transition, gain = realisation.step(half)
-    identity = np.eye(realisation.order)
-    return np.asarray(-np.linalg.solve(identity + transition, gain * amplitude))
-
-
-def _switching_value(process: TransferFunction, realisation: Realisation, half: float, amplitude: float) -> float:
-    """The process variable at the instant when the relay goes up; minus eps where ``half`` is a limit cycle."""
-    turns, rest = divmod(process.dead_time, half)
-    state = _start_state(realisation, half, amplitude)
-    # At the switch the input in force is that of one dead time ago: an odd number of half-periods flips it.
-    transition, gain = realisation.step(half - rest)
-    value = float(realisation.output_vector @ (transition @ state + gain * amplitude))
-    return -value if int(turns) % 2 == 0 else value
-
-
-def _highest(process: TransferFunction, realisation: Realisation, half: float, amplitude: float) -> float:
-    """Largest value over half a period of the rational part's answer, polished."""
-    state = _start_state(realisation, half, amplitude)
-
-    def value(at: float) -> float:
-        transition, gain = realisation.step(at)
-        return float(realisation.output_vector @ (transition @ state + gain * amplitude))
-
-    low, high = 0.0, half
-    for _ in range(7):
-        grid = np.linspace(low, high, 33)
-        values = np.abs([value(float(at)) for at in grid])
-        k = int(np.argmax(values))
-        low, high = float(grid[max(k - 1, 0)]), float(grid[min(k + 1, 32)])
-    return float(values[k])
+        period = ultimate_point(process)[1]
+    except NoCrossover as error:
+        if hysteresis == 0:
+            raise NoLimitCycle("process", "has no phase crossover", "phase lag above 180 degrees") from error
+        return longest, 0.0, SHORTEST_IN_LAGS * longest
+    return longest, period, SHORTEST_IN_ULTIMATE_PERIODS * period
 
 
 def _all_positive(**values: float) -> None:
     for name, value in values.items():
         if not (value > 0 and math.isfinite(value)):
             raise OutOfDomain(name, f"is {value}", "a finite number above 0")
+
+
+def _finite(name: str, value: float) -> None:
+    if not math.isfinite(value):
+        raise OutOfDomain(name, f"is {value}", "a finite number")
+
+
+def _delays(dead_time: float, hysteresis: float) -> None:
+    for name, value in (("dead_time", dead_time), ("hysteresis", hysteresis)):
+        if not 0 <= value < math.inf:
+            raise OutOfDomain(name, f"is {value}", "a finite number, 0 or more")
+    if dead_time == 0 and hysteresis == 0:
+        raise NoLimitCycle("dead_time, hysteresis", "are both 0", "one of them above 0")
