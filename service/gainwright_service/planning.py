@@ -69,7 +69,7 @@ def plan_experiment(loop: Loop, request: StartExperiment) -> Plan:
             watchdog=beat.watchdog.value if beat is not None else WatchdogAction.NONE.value,
             watchdog_timeout_s=beat.timeout_s if beat is not None else None,
             watchdog_value=beat.fixed_value if beat is not None else None,
-            listening_samples=int(wire.listening_s / interval_s),
+            listening_samples=int(0.9 * wire.listening_s / interval_s),
             settle_s=max(1.0, 3 * interval_s),
             first_wait_s=max(1.0, FIRST_WAIT_SAMPLES * interval_s),
             return_time_s=max(30.0, RETURN_SAMPLES * interval_s),

@@ -32,7 +32,7 @@ from gainwright_service.replies import answers_of, known
 from gainwright_wire.analyses import AnalysisReply, Grade, RecordUpload, Verdict
 from gainwright_wire.loops import Loop
 from gainwright_wire.problems import FieldProblem
-from gainwright_wire.tasks import AsFound, LimitMet, Plan, Progress, StartExperiment
+from gainwright_wire.tasks import AsFound, LimitMet, Phase, Plan, Progress, StartExperiment
 
 
 def conclude_experiment(facts: dict[str, Any]) -> dict[str, Any]:
@@ -42,7 +42,8 @@ def conclude_experiment(facts: dict[str, Any]) -> dict[str, Any]:
     ----------
     facts : dict
         ``loop``, ``request``, ``plan``, ``as_found``, ``ended``, ``progress`` documents; ``columns`` with
-        ``time_s``, ``process_variable``, ``controller_output`` (echo), ``commanded_output``, ``phase`` names;
+        ``time_s``, ``process_variable``, ``controller_output`` (echo), ``commanded_output``, ``phase`` (names, or
+        the codes that samples are stored with);
         ``latency_s``, ``requested_by`` and ``sign_offs`` (item to verdict, person, reason).
 
     Returns
@@ -57,6 +58,7 @@ def conclude_experiment(facts: dict[str, Any]) -> dict[str, Any]:
         raise ValueError("facts.plan: a concluded experiment has a plan")
     as_found = known(AsFound, facts.get("as_found"))
     columns = {name: np.asarray(column) for name, column in facts["columns"].items()}
+    columns["phase"] = _phase_names(columns["phase"])
     latency_s = float(facts.get("latency_s") or 0.0)
     progress = known(Progress, facts.get("progress")) or Progress()
     analysis = _analysed(loop, columns, as_found, progress, latency_s)
@@ -136,6 +138,12 @@ def record_refused(error: GainwrightError) -> RecordRefused:
     field = "time_s" if error.field == "time" else error.field
     at_fault = FieldProblem(field=field, problem=error.problem, allowed=error.allowed)
     return RecordRefused(f"{field}: {error.problem}; allowed: {error.allowed}", (at_fault,))
+
+
+def _phase_names(column: Any) -> Any:
+    if column.dtype.kind == "f":
+        return np.array([*Phase])[column.astype(int)]
+    return column
 
 
 def _analysed(
