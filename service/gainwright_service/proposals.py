@@ -26,7 +26,6 @@ from gainwright_service.checklist import (
 from gainwright_service.checklist.items import NOTICE
 from gainwright_service.errors import RecordRefused
 from gainwright_service.listened import FloatArray, listened, quantum_of
-from gainwright_service.proposing import Target, propose
 from gainwright_service.rendering import render
 from gainwright_service.replies import answers_of, known
 from gainwright_wire.analyses import AnalysisReply, Grade, RecordUpload, Verdict
@@ -129,8 +128,9 @@ def analyse_upload(document: dict[str, Any]) -> dict[str, Any]:
         )
     except GainwrightError as error:
         raise record_refused(error) from error
-    target = Target(upload.controller, output_effect=None)
-    return _reply(analysis, target).model_dump(mode="json", by_alias=True)
+    return _reply(analysis, {"controller": upload.controller, "output_effect": None}).model_dump(
+        mode="json", by_alias=True
+    )
 
 
 def record_refused(error: GainwrightError) -> RecordRefused:
@@ -168,18 +168,21 @@ def _analysed(
         )
     except GainwrightError as error:
         return _nothing(str(error))
-    target = Target(
-        loop.controller,
-        loop.output_effect,
-        loop.process_variable.unit,
-        loop.controller_output.unit,
-        loop.controller_output.span,
-    )
+    target = {
+        "controller": loop.controller,
+        "output_effect": loop.output_effect,
+        "input_unit": loop.process_variable.unit,
+        "output_unit": loop.controller_output.unit,
+        "output_span": loop.controller_output.span,
+    }
     return _reply(analysis, target)
 
 
-def _reply(analysis: Analysis, target: Target) -> AnalysisReply:
-    proposals, refused = propose(analysis, target)
+def _reply(analysis: Analysis, target: Mapping[str, Any]) -> AnalysisReply:
+    # Imported here, since the API imports this module and has no use for the numerics that margins bring in.
+    from gainwright_service.proposing import Target, propose
+
+    proposals, refused = propose(analysis, Target(**target))
     return render(AnalysisReply, analysis, proposals=proposals, refused_rules=refused, notice=NOTICE)
 
 
