@@ -1,0 +1,84 @@
+"""The analysis pool: processes of their own for analyses, so that no tick ever waits for a fit.
+
+Owns the processes and their death: a process that dies takes the analyses under way with it; those are tried once more,
+since an analysis drives nothing.
+"""
+
+from __future__ import annotations
+
+import asyncio
+import multiprocessing
+import os
+from collections.abc import Callable
+from concurrent.futures import ProcessPoolExecutor
+from concurrent.futures.process import BrokenProcessPool
+from typing import Any, TypeVar
+
+T = TypeVar("T")
+
+LONGEST_S = 60.0
+
+
+class AnalysisFailed(Exception):
+    """An analysis took too long, or its process died twice."""
+
+
+class AnalysisPool:
+    """Analyses in processes of their own.
+
+    Parameters
+    ----------
+    processes : int
+    """
+
+    def __init__(self, processes: int = 1) -> None:
+        self._processes = processes
+        self._pool: ProcessPoolExecutor | None = None
+
+    async def run(self, function: Callable[..., T], *arguments: Any) -> T:
+        """Call ``function`` in an analysis process; its errors come back as they are.
+
+        Raises
+        ------
+        AnalysisFailed
+        """
+        for _ in range(2):
+            pool = self._open()
+            try:
+                async with asyncio.timeout(LONGEST_S):
+                    return await asyncio.get_running_loop().run_in_executor(pool, function, *arguments)
+            except BrokenProcessPool:
+                self.close()
+            except TimeoutError as error:
+                self.close()
+                raise AnalysisFailed(f"the analysis took more than {LONGEST_S:g} s") from error
+        raise AnalysisFailed("the analysis process died twice")
+
+    def close(self) -> None:
+        """End the processes."""
+        pool, self._pool = self._pool, None
+        if pool is None:
+            return
+        processes = list((getattr(pool, "_processes", None) or {}).values())
+        pool.shutdown(wait=False, cancel_futures=True)
+        for process in processes:
+            process.kill()
+        for process in processes:
+            process.join(2.0)
+
+    def _open(self) -> ProcessPoolExecutor:
+        if self._pool is None:
+            self._pool = ProcessPoolExecutor(
+                self._processes, mp_context=multiprocessing.get_context("spawn"), initializer=_begin
+            )
+        return self._pool
+
+
+def _begin() -> None:
+    """An analysis process: one thread of linear algebra, polite to the process that ticks, deaf to Ctrl-C."""
+    import signal
+
+    for name in ("OPENBLAS_NUM_THREADS", "OMP_NUM_THREADS", "MKL_NUM_THREADS"):
+        os.environ[name] = "1"
+    signal.signal(signal.SIGINT, signal.SIG_IGN)
+    os.nice(5)

@@ -1,0 +1,116 @@
+"""The fence: one active worker per site, held by one lock, confirmed each second.
+
+A file lock beside an embedded database, one advisory lock on one dedicated connection of PostgreSQL. The system frees
+both when their holder dies. A worker that loses its lock takes every experiment through the exit path.
+"""
+
+from __future__ import annotations
+
+import fcntl
+import hashlib
+from pathlib import Path
+from typing import IO, Protocol
+
+from sqlalchemy import text
+from sqlalchemy.ext.asyncio import AsyncConnection, AsyncEngine
+
+from gainwright_service.errors import StoreError
+
+
+class Fence(Protocol):
+    """One site's lock."""
+
+    async def take(self) -> bool:
+        """Try to take the lock; whether it is ours."""
+        ...
+
+    async def held(self) -> bool:
+        """Whether it is still ours, asked of whoever keeps it."""
+        ...
+
+    async def release(self) -> None:
+        """Let it go."""
+        ...
+
+
+class FileFence:
+    """A lock on a file; freed by the system when the process ends, however it ends."""
+
+    def __init__(self, folder: Path, site: str) -> None:
+        self._path = folder / f"site-{site}.lock"
+        self._file: IO[str] | None = None
+
+    async def take(self) -> bool:
+        """Try to lock the file."""
+        file = self._path.open("a")
+        try:
+            fcntl.flock(file, fcntl.LOCK_EX | fcntl.LOCK_NB)
+        except BlockingIOError:
+            file.close()
+            return False
+        self._file = file
+        return True
+
+    async def held(self) -> bool:
+        """A file lock is lost only with the file itself."""
+        return self._file is not None and self._path.exists()
+
+    async def release(self) -> None:
+        """Unlock."""
+        if self._file is not None:
+            self._file.close()
+            self._file = None
+
+
+class AdvisoryFence:
+    """An advisory lock on a connection of its own; lost with the connection."""
+
+    def __init__(self, engine: AsyncEngine, site: str) -> None:
+        self._engine = engine
+        digest = hashlib.sha256(f"gainwright site {site}".encode()).digest()
+        self._number = int.from_bytes(digest[:8], "big", signed=True)
+        self._connection: AsyncConnection | None = None
+
+    async def take(self) -> bool:
+        """Try to take the lock on a new connection."""
+        await self.release()
+        connection = await self._engine.connect()
+        await connection.execution_options(isolation_level="AUTOCOMMIT")
+        taken = await connection.scalar(text("SELECT pg_try_advisory_lock(:number)"), {"number": self._number})
+        if not taken:
+            await connection.close()
+            return False
+        self._connection = connection
+        return True
+
+    async def held(self) -> bool:
+        """Ask the database over the lock's own connection."""
+        if self._connection is None:
+            return False
+        query = text(
+            "SELECT count(*) FROM pg_locks WHERE locktype = 'advisory' AND pid = pg_backend_pid() AND granted "
+            "AND ((classid::bigint << 32) | objid::bigint) = :number"
+        )
+        try:
+            return bool(await self._connection.scalar(query, {"number": self._number}))
+        except StoreError:
+            return False
+
+    async def release(self) -> None:
+        """Close the connection, and with it the lock."""
+        connection, self._connection = self._connection, None
+        if connection is None:
+            return
+        try:
+            await connection.execute(text("SELECT pg_advisory_unlock(:number)"), {"number": self._number})
+            await connection.close()
+        except StoreError:
+            # A broken connection has let the lock go already.
+            await connection.invalidate()
+
+
+def fence_of(engine: AsyncEngine, data_dir: Path, site: str) -> Fence:
+    """The kind of lock that belongs to a database."""
+    if engine.dialect.name == "sqlite":
+        return FileFence(data_dir, site)
+    return AdvisoryFence(engine, site)
