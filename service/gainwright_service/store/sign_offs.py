@@ -1,4 +1,4 @@
-"""Sign-offs: who answered which checklist item of a task. A later answer replaces an earlier; the journal keeps both."""
+"""Sign-offs: who answered which item of a checklist. A later answer replaces an earlier one; the journal has both."""
 
 from __future__ import annotations
 
