@@ -71,9 +71,7 @@ def _column(name: str, values: Any) -> FloatArray:
     try:
         column = np.array(values, dtype=np.float64)
     except (TypeError, ValueError) as error:
-        raise MalformedRecord(
-            name, "is not a column of numbers", "a one-dimensional sequence of numbers"
-        ) from error
+        raise MalformedRecord(name, "is not a column of numbers", "a one-dimensional sequence of numbers") from error
     if column.ndim != 1:
         raise MalformedRecord(name, f"has {column.ndim} dimensions", "one dimension")
     if column.size == 0:

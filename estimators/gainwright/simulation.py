@@ -189,9 +189,7 @@ def simulate(
     OutOfDomain
         Where the shapes differ or time does not increase.
     """
-    return respond(
-        transfer_function, time, output, time, resting_output=resting_output, resting_value=resting_value
-    )
+    return respond(transfer_function, time, output, time, resting_output=resting_output, resting_value=resting_value)
 
 
 @dataclass(frozen=True, slots=True)
