@@ -1,0 +1,58 @@
+"""The checklist as people read it: three counts, and every item that is not a pass in a line of its own."""
+
+from __future__ import annotations
+
+from collections.abc import Iterable
+
+from rich.console import Group, RenderableType
+from rich.table import Table
+from rich.text import Text
+
+from gainwright_client.display.numbers import with_unit
+from gainwright_wire.analyses import Checklist, ChecklistItem, Verdict
+
+STYLES = {Verdict.PASS: "green", Verdict.CAUTION: "yellow", Verdict.FAIL: "red"}
+
+
+def counts(checklist: Checklist) -> Text:
+    """The three counts; never one tick."""
+    found = checklist.counts
+    return Text.assemble(
+        (f"{found.passed} pass", "green"),
+        " · ",
+        (f"{found.caution} caution", "yellow" if found.caution else "dim"),
+        " · ",
+        (f"{found.failed} fail", "red" if found.failed else "dim"),
+    )
+
+
+def checklist_view(checklist: Checklist) -> RenderableType:
+    """What passed in one line per stage, the rest item by item with the thing that removes it."""
+    parts: list[RenderableType] = []
+    for stage in ("before", "during", "after"):
+        items = [item for item in checklist.items if item.stage == stage]
+        if items:
+            parts.append(_passed(stage, items))
+    rest = [item for item in checklist.items if item.verdict is not Verdict.PASS]
+    if rest:
+        parts.append(_table(rest))
+    return Group(*parts)
+
+
+def _passed(stage: str, items: Iterable[ChecklistItem]) -> Text:
+    names = [item.id for item in items if item.verdict is Verdict.PASS]
+    return Text.assemble((f"{stage:>7}  ", "dim"), ("pass  ", "green"), " ".join(names) or "–")
+
+
+def _table(items: Iterable[ChecklistItem]) -> Table:
+    table = Table.grid(padding=(0, 2))
+    table.add_column(no_wrap=True, justify="right", width=7)
+    table.add_column(no_wrap=True)
+    table.add_column()
+    for item in items:
+        said = item.reason or item.detail or item.question
+        number = f" ({with_unit(item.measured, item.unit)})" if item.measured is not None else ""
+        star = "*" if item.starred else ""
+        text = Text.assemble(said.rstrip("."), number, (f"  {item.remedy}" if item.remedy else "", "dim"))
+        table.add_row(f"{item.id}{star}", Text(item.verdict.value, style=STYLES[item.verdict]), text)
+    return table
