@@ -7,13 +7,12 @@ The guard refuses a plan outside its limits once more.
 from __future__ import annotations
 
 from gainwright_service.checklist.before import heartbeat_of
-from gainwright_service.checklist.items import BENCH_SENTENCE
 from gainwright_service.errors import PlanRefused, SafetyFunctionRefused
 from gainwright_service.experiment.plan import Plan, PlanRefusedByGuard
 from gainwright_wire.loops import Loop, LoopClass, ModbusTcp, WatchdogAction
 from gainwright_wire.problems import FieldProblem
+from gainwright_wire.tasks import BENCH_SENTENCE, StartExperiment
 from gainwright_wire.tasks import Plan as WirePlan
-from gainwright_wire.tasks import StartExperiment
 
 EXIT_VALID_S = 600.0
 SMALLEST_AMPLITUDE = 0.01

@@ -11,6 +11,12 @@ from gainwright_wire.analyses import AnalysisReply, Checklist, Finding, Grade, M
 from gainwright_wire.base import Finite, Interval, LongText, NonNegative, Positive, ShortText, Wire
 
 
+BENCH_SENTENCE = (
+    "Worst case, the output stays anywhere in its band until somebody notices: nothing is damaged and nobody is hurt."
+)
+"""What a person signs before a test of class `bench`; it replaces what only a plant needs."""
+
+
 class TaskState(StrEnum):
     """Where a task stands in the queue."""
 
