@@ -31,7 +31,7 @@ from gainwright_service.replies import answers_of, known
 from gainwright_wire.analyses import AnalysisReply, Grade, RecordUpload, Verdict
 from gainwright_wire.loops import Loop
 from gainwright_wire.problems import FieldProblem
-from gainwright_wire.tasks import AsFound, LimitMet, Phase, Plan, Progress, StartExperiment
+from gainwright_wire.tasks import AsFound, Exit, LimitMet, Outcome, Phase, Plan, Progress, StartExperiment
 
 
 def conclude_experiment(facts: dict[str, Any]) -> dict[str, Any]:
@@ -225,8 +225,8 @@ def _conclusion(
     off = np.abs(values - reference) if reference is not None else np.zeros(0)
     scan_s = loop.controller.sample_interval_s if loop.controller is not None else None
     return Conclusion(
-        outcome=ended["outcome"],
-        exit=ended["exit"],
+        outcome=Outcome(ended["outcome"]),
+        exit=Exit(ended["exit"]),
         exit_detail=ended.get("exit_detail", ""),
         limit=known(LimitMet, ended.get("limit")),
         differences=tuple(ended.get("differences", ())),

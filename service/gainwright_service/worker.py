@@ -19,7 +19,7 @@ from sqlalchemy.ext.asyncio import AsyncEngine
 
 from gainwright_service.adapters.build import open_adapter
 from gainwright_service.adapters.links import Links
-from gainwright_service.analysis_pool import AnalysisFailed, AnalysisPool
+from gainwright_service.analysis_pool import AnalysisPool
 from gainwright_service.beating import beat
 from gainwright_service.clock import Clock, SystemClock
 from gainwright_service.drive import Drive
@@ -238,11 +238,14 @@ class Worker:
             "requested_by": row["requested_by"],
             "sign_offs": {s["item"]: {k: s[k] for k in ("verdict", "person", "reason")} for s in signed},
         }
-        try:
-            return await self._pool.run(conclude_experiment, facts)
-        except (AnalysisFailed, ServiceError, ValueError, ArithmeticError) as error:
-            self._log.error("the analysis failed", task=row["id"], detail=str(error))
-            return {"problem": f"the analysis failed: {error}"}
+        # Whatever an analysis trips over, the record and its exit are kept and the task is closed.
+        analysis = asyncio.ensure_future(self._pool.run(conclude_experiment, facts))
+        await asyncio.wait([analysis])
+        error = analysis.exception()
+        if error is not None:
+            self._log.error("the analysis failed", task=row["id"], detail=f"{type(error).__name__}: {error}")
+            return {"problem": f"the analysis failed: {type(error).__name__}: {error}"}
+        return analysis.result()
 
     async def _refused(self, row: dict[str, Any], error: ServiceError) -> None:
         """A task that ends before anything was written."""

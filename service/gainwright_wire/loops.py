@@ -128,9 +128,7 @@ class ModbusTcp(Wire):
     @model_validator(mode="after")
     def _writable(self) -> ModbusTcp:
         if self.controller_output.table != "holding":
-            raise PydanticCustomError(
-                "output_table", "controller_output must be in the holding table to be written"
-            )
+            raise PydanticCustomError("output_table", "controller_output must be in the holding table to be written")
         return self
 
 

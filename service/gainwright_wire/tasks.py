@@ -10,7 +10,6 @@ from pydantic import Field
 from gainwright_wire.analyses import AnalysisReply, Checklist, Finding, Grade, Model, Proposal, RefusedRule
 from gainwright_wire.base import Finite, Interval, LongText, NonNegative, Positive, ShortText, Wire
 
-
 BENCH_SENTENCE = (
     "Worst case, the output stays anywhere in its band until somebody notices: nothing is damaged and nobody is hurt."
 )

@@ -5,7 +5,8 @@ Owns the questions, the thresholds and the counting. Knows no database, no devic
 
 from gainwright_service.checklist.after import Conclusion, measure_after, measure_during
 from gainwright_service.checklist.before import Listening, Start, measure_before
-from gainwright_service.checklist.items import ITEMS, NOTICE, Item, asked_of
+from gainwright_service.checklist.item import Item
+from gainwright_service.checklist.items import ITEMS, NOTICE, asked_of
 from gainwright_service.checklist.record import measure_record
 from gainwright_service.checklist.sheet import SignedAnswer, assemble, blocking, with_answers
 

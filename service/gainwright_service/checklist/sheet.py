@@ -8,7 +8,8 @@ from __future__ import annotations
 from collections.abc import Iterable, Mapping
 from dataclasses import dataclass
 
-from gainwright_service.checklist.items import ITEMS, NOTICE, Item, Stage, asked_of
+from gainwright_service.checklist.item import Item, Stage
+from gainwright_service.checklist.items import ITEMS, NOTICE, asked_of
 from gainwright_wire.analyses import Checklist, ChecklistCounts, ChecklistItem, ItemAnswer, Verdict
 from gainwright_wire.loops import LoopClass
 

@@ -59,7 +59,8 @@ async def _serve(options: argparse.Namespace, log: TextIO | None) -> int:
         sys.stderr.write(f"port {options.port}: cannot be served: {error}\n")
         return 3
     # The protocol's library types its transport loosely; a listening TCP server has sockets.
-    port = int(server.transport.sockets[0].getsockname()[1])  # type: ignore[union-attr, attr-defined]
+    transport: Any = server.transport
+    port = int(transport.sockets[0].getsockname()[1])
     _announce(options, port)
     ended = asyncio.Event()
     event_loop = asyncio.get_running_loop()
