@@ -6,6 +6,7 @@ verbs.
 
 from __future__ import annotations
 
+import math
 from collections.abc import Callable
 from typing import Any
 
@@ -17,6 +18,8 @@ from gainwright_service.practice_rig.dye_house import AUTOMATIC, MANUAL, RigLoop
 LogWrite = Callable[[str, str, float, str], None]
 """Loop, what, value, by whom."""
 
+GRID_S = 0.001
+"""A device lives on this grid of time: few step lengths, so that their matrix exponentials are kept for reuse."""
 CONTROL_S = 0.02
 LOG_STEP = 0.25
 """The PI controller's outputs are logged when they have moved by this much, percent."""
@@ -46,7 +49,7 @@ class Device:
         self.integral_s = loop.integral_s
         self.faults: dict[str, Any] = {}
         self._log = log
-        self._at = now
+        self._at = math.floor(now / GRID_S) * GRID_S
         self._beaten_at: float | None = None
         self._integral = loop.resting_output
         self._logged_output = loop.resting_output
@@ -59,8 +62,9 @@ class Device:
         )
 
     def advance(self, now: float) -> None:
-        """Bring process, controller and watchdog to ``now``."""
-        while self._at < now:
+        """Bring process, controller and watchdog to ``now``, on the grid."""
+        now = math.floor(now / GRID_S) * GRID_S
+        while now - self._at > GRID_S / 2:
             step = now - self._at
             if self.mode == AUTOMATIC:
                 step = min(step, CONTROL_S)
@@ -70,6 +74,7 @@ class Device:
                     self._fire()
                 else:
                     step = min(step, due - self._at)
+            step = max(round(step / GRID_S), 1) * GRID_S
             self._plant.step(step, self._moved())
             self._at += step
             if self.mode == AUTOMATIC:
