@@ -14,12 +14,14 @@ from concurrent.futures import ProcessPoolExecutor
 from concurrent.futures.process import BrokenProcessPool
 from typing import Any, TypeVar
 
+from gainwright_service.errors import ServiceError
+
 T = TypeVar("T")
 
 LONGEST_S = 60.0
 
 
-class AnalysisFailed(Exception):
+class AnalysisFailed(ServiceError):
     """An analysis took too long, or its process died twice."""
 
 

@@ -49,6 +49,8 @@ def quantum_of(values: FloatArray) -> float:
 
     A signal is taken as quantised when at least half of its changes are whole multiples of the smallest one.
     """
+    if values.size <= LEAST_SAMPLES:
+        return 0.0
     changes = np.abs(np.diff(values))
     changes = changes[changes > 1e-12 * max(1.0, float(np.max(np.abs(values))))]
     if changes.size < LEAST_SAMPLES:

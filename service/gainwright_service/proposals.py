@@ -61,7 +61,7 @@ def conclude_experiment(facts: dict[str, Any]) -> dict[str, Any]:
     latency_s = float(facts.get("latency_s") or 0.0)
     progress = known(Progress, facts.get("progress")) or Progress()
     analysis = _analysed(loop, columns, as_found, progress, latency_s)
-    end = _conclusion(loop, facts["ended"], columns, as_found, progress, latency_s, facts.get("gain_found"))
+    end = _conclusion(loop, facts["ended"], columns, as_found, progress, latency_s, _gain_found(loop, as_found))
     start = Start(
         requested_by=facts["requested_by"],
         attended=request.attended,
@@ -70,7 +70,7 @@ def conclude_experiment(facts: dict[str, Any]) -> dict[str, Any]:
         acknowledged_by=request.acknowledged_by,
         work_order=request.work_order,
     )
-    baseline = columns["phase"] == "listening"
+    baseline = (columns["phase"] == "listening") & np.isfinite(columns["process_variable"])
     heard = listened(
         columns["time_s"][baseline],
         columns["process_variable"][baseline],
@@ -78,7 +78,7 @@ def conclude_experiment(facts: dict[str, Any]) -> dict[str, Any]:
         signal=loop.process_variable,
     )
     measurements = measure_before(loop, plan, start=start, listening=heard, as_found=as_found)
-    measurements |= measure_record(loop, plan, end, analysis, quantum_of(columns["process_variable"]))
+    measurements |= measure_record(loop, plan, end, analysis, quantum_of(_finite(columns["process_variable"])))
     measurements |= measure_during(plan, end)
     measurements |= measure_after(loop, plan, end, analysis)
     signed = {
@@ -140,6 +140,10 @@ def record_refused(error: GainwrightError) -> RecordRefused:
     return RecordRefused(f"{field}: {error.problem}; allowed: {error.allowed}", (at_fault,))
 
 
+def _finite(column: FloatArray) -> FloatArray:
+    return column[np.isfinite(column)]
+
+
 def _phase_names(column: Any) -> Any:
     if column.dtype.kind == "f":
         return np.array([*Phase])[column.astype(int)]
@@ -168,14 +172,25 @@ def _analysed(
         )
     except GainwrightError as error:
         return _nothing(str(error))
-    target = {
+    return _reply(analysis, _target(loop))
+
+
+def _target(loop: Loop) -> dict[str, Any]:
+    return {
         "controller": loop.controller,
         "output_effect": loop.output_effect,
         "input_unit": loop.process_variable.unit,
         "output_unit": loop.controller_output.unit,
         "output_span": loop.controller_output.span,
     }
-    return _reply(analysis, target)
+
+
+def _gain_found(loop: Loop, as_found: AsFound | None) -> float | None:
+    from gainwright_service.proposing import Target, proportional_gain_of
+
+    if as_found is None or as_found.gains is None:
+        return None
+    return proportional_gain_of(as_found.gains, Target(**_target(loop)))
 
 
 def _reply(analysis: Analysis, target: Mapping[str, Any]) -> AnalysisReply:
@@ -219,8 +234,8 @@ def _conclusion(
     latency_s: float,
     gain_found: float | None,
 ) -> Conclusion:
-    values: FloatArray = columns["process_variable"][np.isfinite(columns["process_variable"])]
-    commanded: FloatArray = columns["commanded_output"][np.isfinite(columns["commanded_output"])]
+    values = _finite(columns["process_variable"])
+    commanded = _finite(columns["commanded_output"])
     reference = as_found.reference if as_found is not None else None
     off = np.abs(values - reference) if reference is not None else np.zeros(0)
     scan_s = loop.controller.sample_interval_s if loop.controller is not None else None

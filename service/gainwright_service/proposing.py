@@ -11,7 +11,7 @@ from dataclasses import dataclass
 from typing import Literal
 
 from gainwright.errors import ConversionImpossible, GainwrightError, RuleNotApplicable
-from gainwright.forms import EQUATIONS, ControllerForm, hand_check, settings_of
+from gainwright.forms import EQUATIONS, ControllerForm, Setting, gains_of, hand_check, settings_of
 from gainwright.gains import Gains
 from gainwright.margins import LoopMargins, loop_margins
 from gainwright.models import ProcessModel
@@ -21,6 +21,7 @@ from gainwright_service.rendering import render
 from gainwright_wire.analyses import GainSetting, Proposal, RefusedRule
 from gainwright_wire.analyses import LoopMargins as WireMargins
 from gainwright_wire.loops import Controller
+from gainwright_wire.tasks import GainsFound
 
 LARGEST_SENSITIVITY = 2.0
 SMALLEST_GAIN_MARGIN = 2.0
@@ -92,7 +93,7 @@ def _reason(error: Exception) -> str:
 def _knowledge(analysis: Analysis) -> Knowledge:
     if analysis.grade is Grade.UNUSABLE or analysis.ultimate_gain is None or analysis.ultimate_period is None:
         return Knowledge()
-    unlike = any(f.name == "unlike_the_model" and f.verdict is Verdict.FAIL for f in analysis.findings)
+    unlike = any(f.name == "unlike_model" and f.verdict is Verdict.FAIL for f in analysis.findings)
     model = None if unlike else analysis.model
     return Knowledge(analysis.ultimate_gain.value, analysis.ultimate_period.value, model)
 
@@ -139,6 +140,21 @@ def _margins(model: ProcessModel, gains: Gains, target: Target) -> LoopMargins:
     """Margins with the hold of the installed controller put back: half its scan."""
     scan_s = target.controller.sample_interval_s if target.controller is not None else None
     return loop_margins(model.transfer_function(), gains, extra_delay=0.5 * (scan_s or 0.0))
+
+
+def proportional_gain_of(gains: GainsFound, target: Target) -> float | None:
+    """Canonical proportional gain of gains as found; None where the controller is undeclared or they make no sense."""
+    if target.controller is None:
+        return None
+    form = _form(target)
+    try:
+        # The names in the form's own order are those of any gains with all three actions.
+        names = [s.name for s in settings_of(Gains(1.0, 4.0, 1.0), form)]
+        numbers = (gains.gain, gains.integral, gains.derivative)
+        found = [Setting(n, v, "") for n, v in zip(names, numbers, strict=True) if v is not None]
+        return gains_of(tuple(found), form).proportional_gain
+    except ConversionImpossible:
+        return None
 
 
 def _form(target: Target) -> ControllerForm:

@@ -13,6 +13,7 @@ import os
 import signal
 import socket
 import uuid
+from dataclasses import replace
 from typing import Any
 
 from sqlalchemy.ext.asyncio import AsyncEngine
@@ -26,6 +27,7 @@ from gainwright_service.drive import Drive
 from gainwright_service.errors import LockLost, ServiceError, StoreError
 from gainwright_service.experiment.guard import new_guard
 from gainwright_service.fence import Fence, fence_of
+from gainwright_service.gains_found import gains_found
 from gainwright_service.logs import set_up
 from gainwright_service.planning import plan_experiment
 from gainwright_service.proposals import conclude_experiment
@@ -190,8 +192,11 @@ class Worker:
         adapter = open_adapter(loop, self._links, self._clock)
         log = self._writer.log_of(row["id"])
         log.notes["plan"] = plan.document()
+        gains = await gains_found(adapter)
         drive = Drive(adapter, new_guard(plan, self._clock.monotonic_s()), self._clock)
         ended = await run_experiment(plan=plan, drive=drive, log=log, signals=signals, clock=self._clock)
+        if ended.as_found is not None:
+            ended = replace(ended, as_found={**ended.as_found, "gains": gains})
         self._log.info("experiment ended", task=row["id"], outcome=ended.outcome, exit=ended.exit)
         await self._until_stored(self._store_end, row, ended)
         await self._until_stored(self._writer.close, log)

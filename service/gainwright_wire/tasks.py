@@ -172,8 +172,16 @@ class LimitMet(Wire):
     sentence: str = ""
 
 
+class GainsFound(Wire):
+    """The controller's gains as found, in its own form and units."""
+
+    gain: Finite
+    integral: Finite
+    derivative: Finite | None = None
+
+
 class AsFound(Wire):
-    """What was found before the first write."""
+    """What was found before the first write; `gains` is null where the device does not tell them."""
 
     mode: str
     setpoint: Finite | None
@@ -181,6 +189,7 @@ class AsFound(Wire):
     process_variable: Finite
     resting_output: Finite
     reference: Finite
+    gains: GainsFound | None = None
 
 
 class Experiment(Wire):

@@ -10,6 +10,7 @@ from typing import Any
 
 import pytest
 
+from relay_records import relay_record
 from service_app import Site, a_site, sqlite_url
 
 COLUMNS = ("time_s", "process_variable", "controller_output")
@@ -19,28 +20,6 @@ COLUMNS = ("time_s", "process_variable", "controller_output")
 async def site(tmp_path: Path) -> AsyncIterator[Site]:
     async with a_site(sqlite_url(tmp_path)) as site:
         yield site
-
-
-def relay_record(cycles: int = 6, interval_s: float = 0.05) -> dict[str, Any]:
-    """The exact limit cycle of ``exp(-2 s)/(10 s + 1)`` under a relay of 5 about 50, begun at rest (Wang, Hang and
-    Zou, Ind. Eng. Chem. Res. 36(2), 1997; equations from memory): half-period 3.66589493 s, swing 0.9063."""
-    gain, lag, dead_time, amplitude = 1.0, 10.0, 2.0, 5.0
-    half = lag * math.log(2 * math.exp(dead_time / lag) - 1)
-    times, values, outputs = [], [], []
-    value, delayed = 0.0, [0.0] * round(dead_time / interval_s)
-    output, samples = amplitude, int((dead_time + 2 * cycles * half) / interval_s)
-    decay = math.exp(-interval_s / lag)
-    for k in range(samples):
-        times.append(k * interval_s)
-        values.append(60.0 + value)
-        if value > 0:
-            output = -amplitude
-        elif value < 0:
-            output = amplitude
-        outputs.append(50.0 + output)
-        delayed.append(output)
-        value = gain * delayed.pop(0) * (1 - decay) + value * decay
-    return {"time_s": times, "process_variable": values, "controller_output": outputs}
 
 
 def _refused(reply: Any, code: str) -> dict[str, Any]:
@@ -90,3 +69,28 @@ async def test_a_column_of_words_is_refused_by_its_place(site: Site) -> None:
 async def test_an_unknown_alignment_is_refused(site: Site) -> None:
     reply = await site.ada.post("/v1/records", json={**relay_record(2), "output_is": "somewhere"})
     assert _refused(reply, "invalid_request")["errors"][0]["field"] == "output_is"
+
+
+async def test_a_record_is_analysed_proposed_for_and_kept(site: Site) -> None:
+    controller = {"form": "ideal", "gain": "engineering"}
+    body = {**relay_record(), "tag": "TIC-201", "controller": controller, "hysteresis": 0.0, "reference": 60.0}
+    made = await site.ada.post("/v1/records", json=body, headers={"Idempotency-Key": "upload-1"})
+    assert made.status_code == 201, made.text
+    reply = made.json()
+    assert made.headers["location"] == f"/v1/records/{reply['id']}"
+    assert (reply["by"], reply["tag"], reply["samples"]) == ("Ada", "TIC-201", len(body["time_s"]))
+    # K Ku = 8.502425 at L/T = 0.2 (exact, recomputed).
+    assert reply["analysis"]["ultimate_gain"]["value"] == pytest.approx(8.502425, rel=0.05)
+    assert [p["rule"] for p in reply["analysis"]["proposals"] if p["recommended"]]
+    assert (await site.grace.get(made.headers["location"])).json() == reply
+    again = await site.ada.post("/v1/records", json=body, headers={"Idempotency-Key": "upload-1"})
+    assert again.json() == reply
+
+
+async def test_a_record_without_a_whole_cycle_is_unusable_and_says_why(site: Site) -> None:
+    record = {name: column[:60] for name, column in relay_record().items()}
+    analysis = (await site.ada.post("/v1/records", json=record)).json()["analysis"]
+    assert analysis["grade"] == "unusable"
+    assert (analysis["ultimate_gain"], analysis["proposals"]) == (None, [])
+    assert "cycle" in " ".join(analysis["reasons"])
+    assert all("unusable" in refused["reason"] for refused in analysis["refused_rules"])

@@ -136,7 +136,7 @@ def _as_found(end: Conclusion) -> Measurement:
 
 def _grade(analysis: AnalysisReply) -> Measurement:
     verdict = {Grade.GOOD: Verdict.PASS, Grade.FAIR: Verdict.CAUTION, Grade.UNUSABLE: Verdict.FAIL}[analysis.grade]
-    because = "; ".join(analysis.reasons)
+    because = "; ".join(reason.rstrip(".") for reason in analysis.reasons)
     words = {
         Grade.GOOD: "good",
         Grade.FAIR: f"fair: a conservative rule and a second reader. {because}",

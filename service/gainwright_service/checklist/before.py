@@ -198,7 +198,7 @@ def _as_found(loop: Loop, as_found: AsFound) -> Measurement:
         missing.append("mode")
     if loop.controller is None:
         missing.append("controller form and units")
-    if not (isinstance(loop.adapter, ModbusTcp) and loop.adapter.gains):
+    if as_found.gains is None:
         missing.append("gains")
     if missing:
         return Measurement(Verdict.CAUTION, detail="not read: " + ", ".join(missing))
