@@ -130,18 +130,17 @@ def _show(
 
     console.print(outcome_view(finished, loop, Truth(true["ultimate_gain"], true["ultimate_period_s"])))
     console.print(section("The record"))
-    console.print(f"  {folder}: {SAMPLES}, {EXPERIMENT} (the whole reply), rig.jsonl (every write, as the rig saw it),")
-    console.print("  gainwright.db (the service's store with its journal)")
+    console.print(f"  {folder}", style="bold", soft_wrap=True)
+    console.print(f"  {SAMPLES} · {EXPERIMENT}, the whole reply · rig.jsonl, every write as the rig saw it")
+    console.print(f"  {LOOP}, the loop's definition · gainwright.db, the service's store with its journal")
     console.print(section("Try next"))
     unit, output_unit = loop.process_variable.unit, loop.controller_output.unit
     columns = f"--output-column commanded_output --unit {unit} --output-unit {output_unit}"
     console.print(f"  gainwright analyse {folder / SAMPLES} {columns}", soft_wrap=True)
+    console.print("  gainwright demo --loop PIC-620    a sticking valve: not every loop should be tuned")
     console.print(
-        "  gainwright demo --loop PIC-620    a sticking valve: what is said of a loop that should not be tuned"
+        "  gainwright serve                  then, in another terminal, your own loop, described as in loop.json:"
     )
-    console.print(
-        "  gainwright serve                  then `gainwright loop add` and `gainwright tune` on your own loop:"
-    )
-    console.print(f"  {folder / LOOP} is what a loop looks like; put your device's address, registers and limits in.")
+    console.print("  gainwright loop add MY-LOOP.json && gainwright tune MY-TAG")
     console.print(notice_view(finished.notice))
     console.print(f"\nThe demo took {took_s:.0f} s. Nothing is left running.", style="bold")

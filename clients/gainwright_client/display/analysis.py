@@ -129,11 +129,11 @@ def proposals_view(proposals: tuple[Proposal, ...], refused: tuple[RefusedRule, 
     names = list(dict.fromkeys((s.name, s.unit) for p in proposals for s in p.settings))
     table = Table(box=None, padding=(0, 2), show_edge=False, pad_edge=False, header_style="dim")
     table.add_column("")
-    table.add_column("rule", no_wrap=True)
+    table.add_column("\nrule", no_wrap=True)
     table.add_column("")
     for name, unit in names:
-        table.add_column(f"{name} {unit}", justify="right")
-    for name in ("gain margin", "phase margin", "peak sens."):
+        table.add_column(f"{name}\n{unit}", justify="right")
+    for name in ("gain\nmargin", "phase\nmargin", "peak\nsensitivity"):
         table.add_column(name, justify="right")
     for proposal in proposals:
         table.add_row(*_row(proposal, names), style="bold" if proposal.recommended else "")

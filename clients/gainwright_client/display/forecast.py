@@ -40,7 +40,7 @@ def forecast_view(forecast: Forecast, loop: Loop) -> RenderableType:
         ("time", time),
         *expected,
         ("at the end", forecast.exit_action),
-        ("if we die", forecast.watchdog),
+        ("watchdog", forecast.watchdog),
         ("to stop", "Ctrl-C here, or take over at the device: the test yields. This is not an emergency stop."),
     ]
     grid = Table.grid(padding=(0, 2))

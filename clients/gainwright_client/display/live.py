@@ -113,9 +113,10 @@ class LiveView:
             self._live.update(self.frame(), refresh=True)
 
     def _phase(self) -> Phase:
-        if self._samples and self._samples[-1].phase is not Phase.FINISHED:
-            return self._samples[-1].phase
-        return self._progress.phase or Phase.LISTENING
+        """The furthest phase told: samples and progress come by different ways."""
+        told = [self._progress.phase, self._samples[-1].phase if self._samples else None]
+        order = list(Phase)
+        return max((phase for phase in told if phase is not None), key=order.index, default=Phase.LISTENING)
 
     def _plots(self) -> list[RenderableType]:
         width = min(100, self._console.width) - 4 - 22
@@ -184,11 +185,9 @@ class LiveView:
         if progress.period_s:
             parts.append(f"period {with_unit(progress.period_s, 's')}")
         if progress.provisional_ultimate_gain:
-            parts.append(f"ultimate gain so far {with_unit(progress.provisional_ultimate_gain, self._gain_unit())}")
+            parts.append(f"gain so far {with_unit(progress.provisional_ultimate_gain, self._gain_unit())}")
         if progress.worst_deviation:
-            parts.append(
-                f"worst deviation {figure(progress.worst_deviation, 3)} of {figure(self._deviation, 3)} {unit}"
-            )
+            parts.append(f"deviation {figure(progress.worst_deviation, 3)} of {figure(self._deviation, 3)}")
         self._console.print("  ".join(parts), highlight=False)
 
 
