@@ -175,12 +175,13 @@ def _row(proposal: Proposal, names: list[tuple[str, str]]) -> list[RenderableTyp
 
 
 def _chosen(proposal: Proposal) -> RenderableType:
+    settings = ", ".join(f"{s.name} {with_unit(s.value, s.unit, 4)}" for s in proposal.settings)
+    name = f"{title(proposal.rule)} {proposal.controller_kind}"
     lines = [
         Text.assemble(
-            ("▶ ", "green"),
-            (f"{title(proposal.rule)} {proposal.controller_kind}", "bold"),
-            f", {proposal.action} acting: {proposal.equation}",
+            ("▶ ", "green"), (f"{name}: {settings or 'see the record'}", "bold"), f", {proposal.action} acting"
         ),
+        Text(f"  {proposal.equation}"),
         Text(f"  hand check: {proposal.hand_check}"),
         *(Text(f"  ! {caution}", style="yellow") for caution in proposal.cautions),
     ]
