@@ -185,7 +185,7 @@ class _Runner:
         machine = self._machine
         facts = machine.facts
         detail = machine.detail
-        if self._disarm_failed:
+        if self._disarm_failed and self._plan.watchdog_timeout_s is not None:
             detail += f"; the device's watchdog could not be disarmed and may move the output in " \
                       f"{self._plan.watchdog_timeout_s:g} s"  # fmt: skip
         return Ended(
@@ -281,8 +281,8 @@ class _Runner:
             case TakeOver(facts=facts):
                 await drive.take_over(facts)
                 return TookOver(clock.monotonic_s())
-            case WriteTest(output=output, coming=coming):
-                self._log.command((output, coming))
+            case WriteTest(output=output):
+                self._log.command(self._machine.levels)
                 refused = await drive.write_test(output)
                 return None if refused is None else Tripped(clock.monotonic_s(), refused)
             case WriteExit(output=output):

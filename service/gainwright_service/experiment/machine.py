@@ -79,6 +79,7 @@ class Machine:
         self._issued: float | None = None
         self._issued_at = now
         self._coming = 0.0
+        self._previous = 0.0
         self._return: Return | None = None
 
     @property
@@ -89,7 +90,7 @@ class Machine:
     @property
     def levels(self) -> tuple[float, ...]:
         """Outputs that are or may next be in force as ours."""
-        return () if self._issued is None else (self._issued, self._coming)
+        return () if self._issued is None else (self._issued, self._coming, self._previous)
 
     def handle(self, event: Event) -> Commands:
         """Take one event; the commands it calls for, in order."""
@@ -161,6 +162,7 @@ class Machine:
         self._law = RelayLaw(self.facts.reference, self.facts.hysteresis, self.plan.effect)
         self._excitation = starting(self.plan, self.facts)
         self._issued, self._issued_at = self.facts.resting_output, event.now
+        self._previous = self.facts.controller_output
         self._side, self._side_since, self._grown_at = Side.UP, event.now, event.now
         return self._drive(event.now)
 
@@ -250,6 +252,8 @@ class Machine:
             target = max(self._issued - most, min(self._issued + most, target))
         if target == self._issued:
             return ()
+        # Until the write is known to have been taken, the level before it may still be in force as ours.
+        self._previous = self._issued
         self._issued, self._issued_at = target, now
         return (WriteTest(target, self._coming),)
 

@@ -116,8 +116,8 @@ def handler_of(state: State, event: Event) -> str:
 
 GOES_TO: Mapping[str, tuple[State, ...]] = {
     "listen": (State.LISTENING, State.FINISHED),
-    "take_over": (State.TAKING_OVER,),
-    "begin": (State.PROBING,),
+    "take_over": (State.TAKING_OVER, State.FINISHED),
+    "begin": (State.PROBING, State.RETURNING, State.FINISHED),
     "swing": (State.PROBING, State.SWINGING, State.RETURNING),
     "leave_limited": (State.RETURNING,),
     "leave_stopped": (State.RETURNING,),
