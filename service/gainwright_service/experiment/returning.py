@@ -18,6 +18,7 @@ PROOFS = 2
 SCANS = 3
 JUMP_SHARE = 0.02
 BAND_SHARE = 0.25
+MOST_LEVELS = 64
 
 
 @dataclass(frozen=True, slots=True)
@@ -132,6 +133,9 @@ class Return:
     def _write(self, now: float) -> tuple[Command, ...]:
         rate = self.plan.output_rate_per_s
         step = self.exit_output - self.issued
+        if rate is not None:
+            # Of a ramp the step before may still be in force, should this write fail.
+            self.levels = (*self.levels, self.issued)[-MOST_LEVELS:]
         if rate is not None and self.exit_asked:
             most = rate * max(now - self.written_at, self.plan.sample_interval_s)
             step = max(-most, min(most, step))
@@ -142,7 +146,6 @@ class Return:
         self.exit_asked = True
         self.written_at = now
         self.proofs = 0
-        self.levels = (*self.levels[-3:], self.issued)
         return (WriteExit(self.issued),)
 
     def _not_obeyed(self, now: float, echo: float) -> Step:
@@ -184,7 +187,7 @@ class Return:
             return False
         if reading.controller_output is None:
             return not self.plan.reads_output
-        ours = [*self.levels, self.exit_output]
+        ours = [*self.levels, self.issued, self.exit_output]
         if self.plan.watchdog == "resting":
             ours.append(self.facts.resting_output)
         elif self.plan.watchdog == "fixed" and self.plan.watchdog_value is not None:
