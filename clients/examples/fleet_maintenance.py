@@ -99,7 +99,8 @@ class Round:
                 if busy.code is not ProblemCode.GROUP_BUSY or not ours or self.stopping:
                     raise
             async with self.news:
-                await self.news.wait_for(lambda seen=seen: self.ended > seen or self.stopping)
+                while self.ended == seen and not self.stopping:
+                    await self.news.wait()
 
     async def follow(self, id: str) -> Experiment:
         """Follow a test to its end."""
