@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import tempfile
+import threading
 import uuid
 from collections.abc import Iterator
 from pathlib import Path
@@ -41,3 +42,11 @@ def fresh_postgresql(server_uri: str) -> str:
         connection.execute(f'CREATE DATABASE "{name}"')
     base, _, query = server_uri.partition("?")
     return f"{base.rsplit('/', 1)[0]}/{name}" + (f"?{query}" if query else "")
+
+
+def threads_of_failed_connections_end() -> None:
+    """Wait for the threads of SQLite connections that never opened: they speak to the event loop once more, which
+    must not have closed by then."""
+    for thread in threading.enumerate():
+        if "_connection_worker_thread" in thread.name:
+            thread.join(5.0)

@@ -16,6 +16,8 @@ from gainwright_wire.loops import Loop, WatchdogAction
 from gainwright_wire.problems import FieldProblem
 from gainwright_wire.tasks import Forecast, ForecastRequest, Plan, StartExperiment
 
+LARGEST = 1e12
+"""Largest number that a reply carries."""
 _GUESS = ("static_gain", "time_constant_s", "dead_time_s")
 
 
@@ -32,6 +34,7 @@ def forecast(loop: Loop, request: ForecastRequest, *, last: AnalysisReply | None
     start = StartExperiment(attended=True, resting_output=request.resting_output, reference=request.reference)
     plan = plan_with_defaults(loop, start)
     predicted = predict(loop, plan, request, last)
+    _refuse_the_impossible(predicted)
     sheet = assemble(loop.loop_class, ("before",), measure_before(loop, plan, predicted=predicted), {})
     return Forecast(
         tag=loop.tag,
@@ -60,6 +63,22 @@ def predict(loop: Loop, plan: Plan, request: ForecastRequest, last: AnalysisRepl
         return from_guess(plan, guess)
     history = history_of(last)
     return from_history(plan, history) if history is not None else from_limits(plan)
+
+
+def _refuse_the_impossible(predicted: Prediction) -> None:
+    """A guess far beyond any plant gives numbers that no reply can carry."""
+    numbers = (
+        predicted.worst_deviation,
+        predicted.period_s,
+        predicted.time_to_finish_s,
+        predicted.integrated_deviation,
+    )
+    if any(n is not None and not 0 <= n <= LARGEST for n in numbers) or predicted.period_s == 0:
+        problems = tuple(
+            FieldProblem(field=name, problem="predicts numbers beyond any plant", allowed="a plausible guess")
+            for name in (*_GUESS, "noise")
+        )
+        raise RequestError("the guess predicts numbers beyond any plant", problems)
 
 
 def history_of(last: AnalysisReply | None) -> History | None:

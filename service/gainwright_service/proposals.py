@@ -9,6 +9,7 @@ from collections.abc import Mapping
 from typing import Any
 
 import numpy as np
+from pydantic import ValidationError
 
 import gainwright
 from gainwright.errors import GainwrightError
@@ -32,6 +33,10 @@ from gainwright_wire.analyses import AnalysisReply, Grade, RecordUpload, Verdict
 from gainwright_wire.loops import Loop
 from gainwright_wire.problems import FieldProblem
 from gainwright_wire.tasks import AsFound, Exit, LimitMet, Outcome, Phase, Plan, Progress, StartExperiment
+
+LARGEST = 1e12
+"""Largest number that a column or a reply carries."""
+UNREPORTABLE = "the estimates leave the range of numbers that a reply carries"
 
 
 def conclude_experiment(facts: dict[str, Any]) -> dict[str, Any]:
@@ -112,6 +117,7 @@ def analyse_upload(document: dict[str, Any]) -> dict[str, Any]:
         Naming the column at fault and what is allowed.
     """
     upload = RecordUpload.model_validate(document)
+    _refuse_the_immense(upload)
     try:
         record = gainwright.Record(
             time=upload.time_s,
@@ -128,9 +134,24 @@ def analyse_upload(document: dict[str, Any]) -> dict[str, Any]:
         )
     except GainwrightError as error:
         raise record_refused(error) from error
-    return _reply(analysis, {"controller": upload.controller, "output_effect": None}).model_dump(
-        mode="json", by_alias=True
-    )
+    target = {"controller": upload.controller, "output_effect": None}
+    try:
+        reply = _reply(analysis, target)
+    except ValidationError as error:
+        at_fault = FieldProblem(field="process_variable", problem=UNREPORTABLE, allowed="columns in units near one")
+        raise RecordRefused(f"process_variable: {UNREPORTABLE}", (at_fault,)) from error
+    return reply.model_dump(mode="json", by_alias=True)
+
+
+def _refuse_the_immense(upload: RecordUpload) -> None:
+    """Raise `RecordRefused` for finite numbers so large that arithmetic on them means nothing."""
+    for name in ("time_s", "process_variable", "controller_output"):
+        column = np.asarray(getattr(upload, name), dtype=np.float64)
+        beyond = np.flatnonzero(np.isfinite(column) & (np.abs(column) > LARGEST))
+        if beyond.size:
+            problem = f"is {column[beyond[0]]:.3g} at sample {beyond[0]}"
+            at_fault = FieldProblem(field=name, problem=problem, allowed=f"at most {LARGEST:g} in size")
+            raise RecordRefused(f"{name}: {problem}; allowed: {at_fault.allowed}", (at_fault,))
 
 
 def record_refused(error: GainwrightError) -> RecordRefused:
@@ -172,7 +193,10 @@ def _analysed(
         )
     except GainwrightError as error:
         return _nothing(str(error))
-    return _reply(analysis, _target(loop))
+    try:
+        return _reply(analysis, _target(loop))
+    except ValidationError:
+        return _nothing(UNREPORTABLE)
 
 
 def _target(loop: Loop) -> dict[str, Any]:

@@ -9,6 +9,7 @@ from gainwright_service.checklist import SignedAnswer, with_answers
 from gainwright_service.checklist.items import NOTICE
 from gainwright_wire.analyses import AnalysisReply, Checklist, Verdict
 from gainwright_wire.base import Wire
+from gainwright_wire.problems import ProblemCode
 from gainwright_wire.tasks import (
     AsFound,
     Exit,
@@ -19,6 +20,7 @@ from gainwright_wire.tasks import (
     Progress,
     StartExperiment,
     StreamProgress,
+    TaskProblem,
     TaskState,
 )
 
@@ -60,8 +62,16 @@ def experiment(row: Mapping[str, Any], sign_offs: Mapping[str, SignedAnswer] | N
         refused_rules=analysis.refused_rules if analysis else (),
         checklist=sheet,
         analysis=analysis,
+        problem=_problem(row["problem"], result.get("problem")),
         notice=NOTICE,
     )
+
+
+def _problem(refused: Mapping[str, Any] | None, analysis: str | None) -> TaskProblem | None:
+    """Why a task moved nothing, or why what it moved could not be analysed."""
+    if refused:
+        return TaskProblem(code=refused["code"], detail=refused["detail"])
+    return TaskProblem(code=ProblemCode.INTERNAL.value, detail=analysis) if analysis else None
 
 
 def answers_of(request: StartExperiment, person: str) -> dict[str, SignedAnswer]:

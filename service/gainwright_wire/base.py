@@ -11,8 +11,10 @@ Positive = Annotated[float, Field(gt=0, allow_inf_nan=False, le=1e12)]
 NonNegative = Annotated[float, Field(ge=0, allow_inf_nan=False, le=1e12)]
 Tag = Annotated[str, Field(pattern=r"^[A-Za-z0-9][A-Za-z0-9._-]{0,63}$", examples=["TIC-201"])]
 Site = Annotated[str, Field(pattern=r"^[a-z0-9][a-z0-9-]{0,31}$", examples=["local"])]
-ShortText = Annotated[str, Field(max_length=200)]
-LongText = Annotated[str, Field(max_length=2000)]
+_NO_NUL = r"^[^\x00]*$"
+"""PostgreSQL keeps no text with a NUL in it."""
+ShortText = Annotated[str, Field(max_length=200, pattern=_NO_NUL)]
+LongText = Annotated[str, Field(max_length=2000, pattern=_NO_NUL)]
 
 
 class Wire(BaseModel):

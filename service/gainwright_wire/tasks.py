@@ -192,6 +192,14 @@ class AsFound(Wire):
     gains: GainsFound | None = None
 
 
+class TaskProblem(Wire):
+    """Why a task could not do its work."""
+
+    code: str
+    detail: str
+    context: dict[str, Any] = {}
+
+
 class Experiment(Wire):
     """One run of the relay test, queued, running or finished."""
 
@@ -222,6 +230,7 @@ class Experiment(Wire):
     refused_rules: tuple[RefusedRule, ...]
     checklist: Checklist | None
     analysis: AnalysisReply | None
+    problem: TaskProblem | None = None
     notice: str
 
 
@@ -257,12 +266,4 @@ class StreamSample(Wire):
 class Acknowledge(Wire):
     """A person has looked at the loop after an exit that could not be verified."""
 
-    remark: Annotated[str, Field(min_length=3, max_length=500)]
-
-
-class TaskProblem(Wire):
-    """Why a task could not do its work."""
-
-    code: str
-    detail: str
-    context: dict[str, Any] = {}
+    remark: Annotated[str, Field(min_length=3, max_length=500, pattern=r"^[^\x00]*$")]

@@ -124,6 +124,7 @@ async def test_a_replacement_cannot_rename(site: Site) -> None:
         ({"limits__deviation_up": float("inf")}, "invalid_request", "limits.deviation_up"),
         ({"loop_class": "plant", "adapter__mode": None}, "invalid_request", "adapter.mode"),
         ({"colour": "blue"}, "invalid_request", "colour"),
+        ({"description": "a\x00b"}, "invalid_request", "description"),
     ],
 )
 async def test_bad_loops_are_refused_by_field_and_nothing_is_kept(
@@ -185,3 +186,33 @@ async def test_every_change_is_in_the_journal_chained_and_by_person(site: Site) 
     entries = (await site.ada.get("/v1/journal", params={"subject": "TIC-201"})).json()["items"]
     assert [entry["person"] for entry in entries] == ["Ada", "Grace"]
     assert entries[1]["previous_hash"] == entries[0]["hash"]
+
+
+@pytest.mark.parametrize(
+    "path",
+    [
+        "/v1/loops/%00",
+        "/v1/loops?after=%00",
+        "/v1/loops?limit=0",
+        "/v1/loops?limit=99999999999999999999",
+        "/v1/experiments?after=99999999999999999999",
+        "/v1/experiments?state=resting",
+        "/v1/journal?after=-1",
+        "/v1/journal?subject=%00",
+    ],
+)
+async def test_odd_paths_and_queries_are_refused_by_name(site: Site, path: str) -> None:
+    assert _problem(await site.ada.get(path), 422, "invalid_request")["errors"][0]["field"]
+
+
+@pytest.mark.parametrize("body", [b"", b"null", b"[]", b"\xff\xfe", b"[" * 100_000, b'{"a":' * 50_000])
+async def test_bodies_that_are_no_loop_are_refused(site: Site, body: bytes) -> None:
+    reply = await site.ada.post("/v1/loops", content=body, headers={"Content-Type": "application/json"})
+    _problem(reply, 422, "invalid_request")
+
+
+async def test_a_guess_beyond_any_plant_is_refused(site: Site) -> None:
+    await site.ada.post("/v1/loops", json=loop_document())
+    guess = {"static_gain": 1, "time_constant_s": 1, "dead_time_s": 1, "noise": 1e12}
+    problem = _problem(await site.ada.post("/v1/loops/TIC-201/forecast", json=guess), 422, "invalid_request")
+    assert "noise" in [e["field"] for e in problem["errors"]]

@@ -10,12 +10,13 @@ from typing import Any
 
 import pytest
 from fastapi.routing import APIRoute
+from sqlalchemy import text
 
 from gainwright_service.api.app import ROUTERS
 from gainwright_service.api.problems import MEDIA_TYPE, STATUS
+from gainwright_service.store.connect import writing
 from gainwright_wire.problems import ProblemCode
 from service_app import Site, a_site, sqlite_url
-from service_loops import loop_document
 
 
 @pytest.fixture
@@ -103,16 +104,14 @@ async def test_a_fault_of_ours_is_a_problem_that_tells_nothing_of_it(site: Site)
     assert "AttributeError" not in reply.text
 
 
-def _wreck(folder: Path) -> None:
-    for file in folder.glob("gainwright.db*"):
-        file.unlink()
-    (folder / "gainwright.db").mkdir()
+async def _wreck(site: Site) -> None:
+    async with writing(site.engine) as connection:
+        for table in ("tokens", "sites"):
+            await connection.execute(text(f"DROP TABLE {table}"))
 
 
-async def test_the_store_away_is_a_problem_with_a_time_to_retry(site: Site, tmp_path: Path) -> None:
-    await site.ada.post("/v1/loops", json=loop_document())
-    await site.engine.dispose()
-    _wreck(tmp_path)
+async def test_a_store_that_cannot_be_used_is_a_problem_with_a_time_to_retry(site: Site) -> None:
+    await _wreck(site)
     reply = await site.ada.get("/v1/loops")
     assert (reply.status_code, reply.json()["code"]) == (503, "store_unavailable")
     assert reply.headers["retry-after"] == "1"

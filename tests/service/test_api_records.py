@@ -94,3 +94,16 @@ async def test_a_record_without_a_whole_cycle_is_unusable_and_says_why(site: Sit
     assert (analysis["ultimate_gain"], analysis["proposals"]) == (None, [])
     assert "cycle" in " ".join(analysis["reasons"])
     assert all("unusable" in refused["reason"] for refused in analysis["refused_rules"])
+
+
+async def test_immense_numbers_are_refused_by_column(site: Site) -> None:
+    record = relay_record(2)
+    record["process_variable"][7] = 1e13
+    (error,) = _refused(await site.ada.post("/v1/records", json=record), "malformed_record")["errors"]
+    assert (error["field"], error["problem"]) == ("process_variable", "is 1e+13 at sample 7")
+
+
+async def test_estimates_beyond_what_a_reply_carries_are_refused(site: Site) -> None:
+    record = relay_record()
+    record["time_s"] = [1e-13 * t for t in record["time_s"]]
+    _refused(await site.ada.post("/v1/records", json=record), "malformed_record")

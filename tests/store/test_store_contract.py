@@ -13,7 +13,11 @@ from alembic.migration import MigrationContext
 from sqlalchemy import text
 from sqlalchemy.ext.asyncio import AsyncEngine
 
-from databases import database_url, postgresql_server  # noqa: F401 - fixtures
+from databases import (  # noqa: F401 - fixtures
+    database_url,
+    postgresql_server,
+    threads_of_failed_connections_end,
+)
 from gainwright_service.errors import (
     AlreadyExists,
     ExitNotAcknowledged,
@@ -332,3 +336,4 @@ async def test_a_database_that_does_not_answer_is_a_named_error() -> None:
             async with engine.connect() as connection:
                 await connection.execute(text("SELECT 1"))
         await engine.dispose()
+        threads_of_failed_connections_end()

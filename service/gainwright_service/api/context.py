@@ -49,8 +49,8 @@ class Context:
         return self.clock.wall_time().timestamp()
 
 
-def context_of(request: Request) -> Context:
-    """The context of the app that serves the request."""
+async def context_of(request: Request) -> Context:
+    """The context of the app that serves the request. Async, or each request would take a turn in a thread."""
     context = request.app.state.context
     assert isinstance(context, Context)
     return context

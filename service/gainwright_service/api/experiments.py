@@ -12,7 +12,7 @@ from gainwright_service import signing
 from gainwright_service.api import tabulating
 from gainwright_service.api.access import InChange, InPerson, Reply
 from gainwright_service.api.context import InContext
-from gainwright_service.api.loops import InTag, Limit
+from gainwright_service.api.loops import InTag, Limit, OfTag
 from gainwright_service.api.problems import documented
 from gainwright_service.replies import experiment
 from gainwright_service.starting import start_experiment
@@ -32,7 +32,7 @@ from gainwright_wire.tasks import (
 router = APIRouter(prefix="/v1", tags=["experiments"])
 
 InId = Annotated[str, Path(pattern=r"^[0-9a-f]{32}$", description="The experiment's identifier")]
-Cursor = Annotated[str | None, Query(max_length=20, pattern=r"^[0-9]+$", description="`next` of the page before")]
+Cursor = Annotated[str | None, Query(pattern=r"^[0-9]{1,15}$", description="`next` of the page before")]
 ItemId = Annotated[str, Path(pattern=r"^[ABD][0-9]{1,2}$")]
 Answers = dict[Annotated[str, ItemId], Answer]
 _STARTED = (
@@ -70,7 +70,7 @@ async def start(tag: InTag, request: StartExperiment, change: InChange) -> Respo
 async def list_experiments(
     context: InContext,
     person: InPerson,
-    tag: Annotated[str | None, Query(max_length=64)] = None,
+    tag: OfTag = None,
     state: TaskState | None = None,
     after: Cursor = None,
     limit: Limit = 50,

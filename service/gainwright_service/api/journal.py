@@ -23,7 +23,7 @@ async def read_journal(
     person: InPerson,
     after: Cursor = None,
     limit: Limit = 100,
-    subject: Annotated[str | None, Query(max_length=200)] = None,
+    subject: Annotated[str | None, Query(max_length=200, pattern=r"^[^\x00]*$")] = None,
 ) -> JournalPage:
     """Acts of people and of the service, oldest first, each chained to the one before."""
     async with context.engine.connect() as connection:

@@ -39,7 +39,7 @@ async def stream(
     id: InId,
     context: InContext,
     person: InPerson,
-    last_event_id: Annotated[str | None, Header(alias="Last-Event-ID", max_length=20, pattern=r"^[0-9]+$")] = None,
+    last_event_id: Annotated[str | None, Header(alias="Last-Event-ID", pattern=r"^[0-9]{1,9}$")] = None,
 ) -> StreamingResponse:
     """Follow an experiment live. Resumes after `Last-Event-ID`; ends with the finished experiment."""
     async with context.engine.connect() as connection:

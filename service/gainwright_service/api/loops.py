@@ -20,8 +20,10 @@ from gainwright_wire.tasks import Forecast, ForecastRequest
 
 router = APIRouter(prefix="/v1/loops", tags=["loops"])
 
-InTag = Annotated[str, Path(min_length=1, max_length=64, description="The loop's tag")]
-After = Annotated[str | None, Query(max_length=64, description="Cursor: `next` of the page before")]
+_TAG = r"^[A-Za-z0-9][A-Za-z0-9._-]{0,63}$"
+InTag = Annotated[str, Path(pattern=_TAG, description="The loop's tag")]
+OfTag = Annotated[str | None, Query(pattern=_TAG, description="Only of the loop with this tag")]
+After = Annotated[str | None, Query(pattern=_TAG, description="Cursor: `next` of the page before")]
 Limit = Annotated[int, Query(ge=1, le=500, description="Most items on the page")]
 
 

@@ -6,7 +6,7 @@ A missing number is empty in CSV and null in JSON.
 from __future__ import annotations
 
 import math
-from collections.abc import Iterator, Mapping
+from collections.abc import AsyncIterator, Iterator, Mapping
 from typing import Any
 
 from gainwright_service.store.samples import PHASES
@@ -16,7 +16,7 @@ HEADER = "number,time_s,process_variable,controller_output,commanded_output,phas
 _LINES_AT_ONCE = 2000
 
 
-def csv_lines(first_number: int, columns: Mapping[str, Any]) -> Iterator[str]:
+async def csv_lines(first_number: int, columns: Mapping[str, Any]) -> AsyncIterator[str]:
     """The samples as CSV text in pieces: UTF-8, comma, a header line, seventeen significant digits at most."""
     yield HEADER + "\n"
     piece: list[str] = []
