@@ -156,7 +156,8 @@ def grade_of(findings: list[Finding]) -> tuple[Grade, tuple[str, ...]]:
 
 def _chatter(record: Record, cycles: Cycles) -> float:
     """Share of intervals between switches below 0.35 of the median of their direction."""
-    lengths = np.diff(record.time[cycles.switches])
+    # From the first switch on; the start from rest is shorter than any half-period that follows.
+    lengths = np.diff(record.time[cycles.switches[1:]])
     share = 0.0
     for part in (lengths[::2], lengths[1::2]):
         if part.size:

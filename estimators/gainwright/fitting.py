@@ -25,6 +25,7 @@ MOST_EVALUATIONS = 60
 MOST_SAMPLES = 1500
 TINY = 1e-12
 NUDGE = 1e-6
+ALL_BUT_REAL = 0.98
 
 
 @dataclass(frozen=True, slots=True, eq=False)
@@ -156,6 +157,9 @@ def _fit(data: _Data, structure: Structure, period: float) -> Fit | None:
     found = least_squares(
         residual, best, bounds=(low, high), x_scale=0.3, max_nfev=MOST_EVALUATIONS, xtol=1e-10, ftol=1e-12
     )
+    if structure is Structure.SECOND_ORDER_COMPLEX and found.x[2] > np.log(ALL_BUT_REAL):
+        # Two equal real poles: the real structure says the same, with tangents that mean something.
+        return None
     left, linear, columns = data.projected(step, found.x)
     if linear[0] == 0.0 or not np.all(np.isfinite(left)):
         return None

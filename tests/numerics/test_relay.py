@@ -53,9 +53,7 @@ def test_a_process_at_rest_on_the_reference_does_not_chatter_without_hysteresis(
 
 
 @pytest.mark.parametrize(("effect", "up", "down"), [(1, 43.0, 37.0), (-1, 37.0, 43.0)])
-def test_the_up_side_drives_the_process_variable_up_whatever_the_effect(
-    effect: int, up: float, down: float
-) -> None:
+def test_the_up_side_drives_the_process_variable_up_whatever_the_effect(effect: int, up: float, down: float) -> None:
     law = RelayLaw(0.0, 0.0, effect=effect)
     assert law.level(Side.UP, 40.0, 3.0) == up
     assert law.level(Side.DOWN, 40.0, 3.0) == down

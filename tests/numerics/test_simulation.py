@@ -192,9 +192,7 @@ def test_disturbances_do_what_their_names_say() -> None:
     settings_ = {"amplitude": 1.0, "sample_interval_s": 0.05, "cycles": 12, "baseline_s": 200.0}
     law = RelayLaw(0.0, 0.5)
     wanted = Disturbances(noise=0.1, noise_correlation=0.8, quantum=0.01, jitter=0.1, missing=0.1)
-    record = simulate_relay_test(
-        FIRST_ORDER, law, **settings_, disturbances=wanted, generator=np.random.default_rng(3)
-    )
+    record = simulate_relay_test(FIRST_ORDER, law, **settings_, disturbances=wanted, generator=np.random.default_rng(3))
     whole = simulate_relay_test(
         FIRST_ORDER,
         law,
