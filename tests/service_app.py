@@ -12,13 +12,13 @@ from typing import Any
 
 import httpx
 from fastapi import FastAPI
-from gainwright_service.store.connect import migrate, open_engine, writing
 from sqlalchemy.ext.asyncio import AsyncEngine
 
 from gainwright_service.api.app import create_app
 from gainwright_service.api.context import Context
 from gainwright_service.api.following import Follower
 from gainwright_service.store import people, sites
+from gainwright_service.store.connect import migrate, open_engine, writing
 
 START = datetime(2026, 3, 1, 8, 0, tzinfo=UTC)
 
