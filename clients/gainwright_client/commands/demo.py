@@ -137,7 +137,7 @@ def _show(
     unit, output_unit = loop.process_variable.unit, loop.controller_output.unit
     columns = f"--output-column commanded_output --unit {unit} --output-unit {output_unit}"
     console.print(f"  gainwright analyse {folder / SAMPLES} {columns}", soft_wrap=True)
-    console.print("  gainwright demo --loop PIC-620    a sticking valve: not every loop should be tuned")
+    console.print("  gainwright demo --loop LIC-310    a level, which integrates; or FIC-105, a fast and noisy flow")
     console.print(
         "  gainwright serve                  then, in another terminal, your own loop, described as in loop.json:"
     )

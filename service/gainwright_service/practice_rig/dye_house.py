@@ -183,6 +183,7 @@ DYE_HOUSE: tuple[RigLoop, ...] = (
         deviation=3.0,
         max_amplitude=8.0,
         sample_interval_s=0.05,
+        gain=1.6,
     ),
     RigLoop(
         tag="FIC-105",
