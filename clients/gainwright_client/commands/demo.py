@@ -138,9 +138,7 @@ def _show(
     columns = f"--output-column commanded_output --unit {unit} --output-unit {output_unit}"
     console.print(f"  gainwright analyse {folder / SAMPLES} {columns}", soft_wrap=True)
     console.print("  gainwright demo --loop LIC-310    a level, which integrates; or FIC-105, a fast and noisy flow")
-    console.print(
-        "  gainwright serve                  then, in another terminal, your own loop, described as in loop.json:"
-    )
-    console.print("  gainwright loop add MY-LOOP.json && gainwright tune MY-TAG")
+    console.print("  gainwright serve                  then a loop of yours, described as in loop.json, from another")
+    console.print("                                    terminal: gainwright loop add FILE.json; gainwright tune TAG")
     console.print(notice_view(finished.notice))
     console.print(f"\nThe demo took {took_s:.0f} s. Nothing is left running.", style="bold")

@@ -89,6 +89,7 @@ def show_forecast(console: Console, forecast: Forecast, loop: Loop, *, quiet: bo
     if not quiet:
         console.print(section(f"Forecast for {loop.tag}, {loop.description}"))
         console.print(forecast_view(forecast, loop))
+        console.print()
 
 
 def run_test(

@@ -9,7 +9,7 @@ from rich.table import Table
 from rich.text import Text
 
 from gainwright_client.display.numbers import with_unit
-from gainwright_wire.analyses import Checklist, ChecklistItem, Verdict
+from gainwright_wire.analyses import Checklist, ChecklistItem, ItemAnswer, Verdict
 
 STYLES = {Verdict.PASS: "green", Verdict.CAUTION: "yellow", Verdict.FAIL: "red"}
 
@@ -34,8 +34,12 @@ def checklist_view(checklist: Checklist) -> RenderableType:
         if items:
             parts.append(_passed(stage, items))
     rest = [item for item in checklist.items if item.verdict is not Verdict.PASS]
-    if rest:
-        parts.append(_table(rest))
+    open_items = [item for item in rest if item.basis is ItemAnswer.UNANSWERED]
+    if len(open_items) < len(rest):
+        parts.append(_table(item for item in rest if item not in open_items))
+    if open_items:
+        names = " ".join(f"{item.id}{_star(item)}" for item in open_items)
+        parts.append(Text.assemble("         ", ("fail  ", "red"), f"neither measured nor answered: {names}"))
     return Group(*parts)
 
 
@@ -52,7 +56,10 @@ def _table(items: Iterable[ChecklistItem]) -> Table:
     for item in items:
         said = item.reason or item.detail or item.question
         number = f" ({with_unit(item.measured, item.unit)})" if item.measured is not None else ""
-        star = "*" if item.starred else ""
         text = Text.assemble(said.rstrip("."), number, (f"  {item.remedy}" if item.remedy else "", "dim"))
-        table.add_row(f"{item.id}{star}", Text(item.verdict.value, style=STYLES[item.verdict]), text)
+        table.add_row(f"{item.id}{_star(item)}", Text(item.verdict.value, style=STYLES[item.verdict]), text)
     return table
+
+
+def _star(item: ChecklistItem) -> str:
+    return "*" if item.starred else ""

@@ -78,6 +78,7 @@ def _ended(experiment: Experiment) -> Text:
     exit_style = "green" if experiment.exit is Exit.VERIFIED else "bold red"
     detail = f" ({experiment.exit_detail.rstrip('.')})" if experiment.exit_detail else ""
     return Text.assemble(
+        "\n",
         (outcome.value if outcome else "not finished", SAID[outcome] if outcome else ""),
         " · exit ",
         (experiment.exit.value.replace("_", " "), exit_style),
