@@ -21,6 +21,8 @@ from typing import Any
 
 import httpx
 
+from gainwright_client.interrupts import uninterrupted
+
 READY_S = 30.0
 POLL_S = 0.05
 EXIT_S = 60.0
@@ -73,21 +75,22 @@ def practice_rig(folder: Path) -> Iterator[Rig]:
         loops = {loop["definition"]["tag"]: loop for loop in announced["loops"]}
         yield Rig(announced["host"], announced["port"], loops, process)
     finally:
-        _end(process)
+        with uninterrupted():
+            _end(process)
 
 
 @contextmanager
 def service(folder: Path) -> Iterator[Service]:
-    """A service whose data lies in the folder, with none of this process's own settings for one."""
+    """A service whose data lies in the folder, with none of this process's own settings; ends by itself as the rig."""
     url = f"http://127.0.0.1:{_free_port()}"
     said = folder / "service.log"
     environment = {name: value for name, value in os.environ.items() if not name.startswith("GAINWRIGHT_")}
     command = [sys.executable, "-m", "gainwright_client", "serve"]
     with said.open("ab") as output:
         process = subprocess.Popen(
-            [*command, "--port", url.rpartition(":")[2], "--data-dir", str(folder)],
+            [*command, "--port", url.rpartition(":")[2], "--data-dir", str(folder), "--lifeline"],
             env=environment,
-            stdin=subprocess.DEVNULL,
+            stdin=subprocess.PIPE,
             stdout=output,
             stderr=output,
             start_new_session=True,
@@ -96,7 +99,8 @@ def service(folder: Path) -> Iterator[Service]:
         _wait_ready(url, process, said)
         yield Service(url, (folder / "first-token").read_text(encoding="utf-8").strip(), process)
     finally:
-        _end(process)
+        with uninterrupted():
+            _end(process)
 
 
 def _first_line(process: subprocess.Popen[bytes], said: Path) -> bytes:

@@ -10,8 +10,9 @@ from typing import Any, cast
 import pytest
 
 from gainwright_client.client import Client
-from gainwright_client.commands.watching import STOPPING, Interrupts, Left, watch
+from gainwright_client.commands.watching import STOPPING, Left, watch
 from gainwright_client.errors import NotActive
+from gainwright_client.interrupts import Interrupts, uninterrupted
 from gainwright_wire.problems import Problem, ProblemCode
 from gainwright_wire.tasks import Experiment, Phase, StreamProgress, StreamSample
 
@@ -114,3 +115,9 @@ def test_the_handlers_of_before_are_put_back() -> None:
     with Interrupts():
         assert signal.getsignal(signal.SIGTERM) != before
     assert signal.getsignal(signal.SIGTERM) == before
+
+
+def test_what_is_being_ended_is_not_interrupted() -> None:
+    with Interrupts(), uninterrupted():
+        signal.raise_signal(signal.SIGINT)
+        signal.raise_signal(signal.SIGTERM)

@@ -50,9 +50,9 @@ def demo(
 def _demonstrate(tag: str, folder: Path, as_json: bool) -> tuple[Experiment, dict[str, Any]]:
     from gainwright_client.client import Client
     from gainwright_client.commands.saving import save
-    from gainwright_client.commands.watching import Interrupts
     from gainwright_client.demonstration import practice_rig, service
     from gainwright_client.display.screen import screen
+    from gainwright_client.interrupts import Interrupts
     from gainwright_wire.tasks import StartExperiment
 
     console = screen(errors=as_json)

@@ -3,7 +3,9 @@
 from __future__ import annotations
 
 import os
+import signal
 import sys
+import threading
 from typing import Annotated
 
 import typer
@@ -17,6 +19,7 @@ def serve(
     data_dir: DataDir = None,
     database_url: DatabaseUrl = None,
     site: Annotated[str, typer.Option(help="The site that the worker serves.")] = "local",
+    lifeline: Annotated[bool, typer.Option("--lifeline", help="End when standard input closes.")] = False,
     as_json: AsJson = False,
 ) -> None:
     """Run the service: its API and the site's worker, until Ctrl-C, which ends every test through its exit."""
@@ -29,6 +32,8 @@ def serve(
     }
     place["token_file"] = os.path.join(place["data_dir"], "first-token")
     _announce(place, as_json)
+    if lifeline:
+        threading.Thread(target=_end_with_input, name="lifeline", daemon=True).start()
     raise typer.Exit(supervisor.serve(environment, site=site))
 
 
@@ -77,6 +82,13 @@ def environment_of(
         "GAINWRIGHT_DATABASE_URL": database_url,
     }
     return {**os.environ, **{name: value for name, value in stated.items() if value}}
+
+
+def _end_with_input() -> None:
+    """Ask this process to end when whoever holds its standard input is no more."""
+    while os.read(sys.stdin.fileno(), 4096):
+        continue
+    os.kill(os.getpid(), signal.SIGTERM)
 
 
 def _announce(place: dict[str, str], as_json: bool) -> None:

@@ -96,8 +96,9 @@ def run_test(
     client: Client, loop: Loop, forecast: Forecast, start: StartExperiment, console: Console, *, quiet: bool = False
 ) -> Experiment:
     """Start a test and follow it to its end."""
-    from gainwright_client.commands.watching import Interrupts, Left, watch
+    from gainwright_client.commands.watching import Left, watch
     from gainwright_client.display.live import LiveView, Silent
+    from gainwright_client.interrupts import Interrupts
 
     deviation = min(forecast.plan.deviation_up, forecast.plan.deviation_down)
     with Interrupts() as interrupts:

@@ -9,7 +9,7 @@ from rich.table import Table
 from rich.text import Text
 
 from gainwright_client.display.numbers import figure, half_width_percent, interval, with_unit
-from gainwright_wire.analyses import AnalysisReply, Finding, Grade, Model, Proposal, RefusedRule, Verdict
+from gainwright_wire.analyses import AnalysisReply, Finding, GainSetting, Grade, Model, Proposal, RefusedRule, Verdict
 from gainwright_wire.base import Interval
 
 GRADES = {Grade.GOOD: "bold green", Grade.FAIR: "bold yellow", Grade.UNUSABLE: "bold red"}
@@ -124,9 +124,9 @@ def findings_view(findings: tuple[Finding, ...]) -> RenderableType:
     return grid
 
 
-def proposals_view(proposals: tuple[Proposal, ...], refused: tuple[RefusedRule, ...]) -> RenderableType:
+def proposals_view(proposals: tuple[Proposal, ...], refused: tuple[RefusedRule, ...], units: Units) -> RenderableType:
     """The proposals in the controller's own form, with the margins they leave on the fitted model."""
-    names = list(dict.fromkeys((s.name, s.unit) for p in proposals for s in p.settings))
+    names = list(dict.fromkeys((s.name, s.unit) for p in proposals for s in shown(p, units)))
     table = Table(box=None, padding=(0, 2), show_edge=False, pad_edge=False, header_style="dim")
     table.add_column("")
     table.add_column("\nrule", no_wrap=True)
@@ -136,11 +136,11 @@ def proposals_view(proposals: tuple[Proposal, ...], refused: tuple[RefusedRule, 
     for name in ("gain\nmargin", "phase\nmargin", "peak\nsensitivity"):
         table.add_column(name, justify="right")
     for proposal in proposals:
-        table.add_row(*_row(proposal, names), style="bold" if proposal.recommended else "")
+        table.add_row(*_row(proposal, names, units), style="bold" if proposal.recommended else "")
     chosen = next((p for p in proposals if p.recommended), None)
     parts: list[RenderableType] = [table]
     if chosen is not None:
-        parts.append(_chosen(chosen))
+        parts.append(_chosen(chosen, units))
     if refused:
         listed = ", ".join(f"{title(r.rule)} {r.controller_kind}" for r in refused)
         parts.append(Text(f"{len(refused)} rules do not apply here, with their reasons in the record: {listed}", "dim"))
@@ -157,8 +157,20 @@ def grade_text(grade: Grade) -> Text:
     return Text(f"grade {grade.value}", style=GRADES[grade])
 
 
-def _row(proposal: Proposal, names: list[tuple[str, str]]) -> list[RenderableType]:
-    values = {(s.name, s.unit): figure(s.value, 4) for s in proposal.settings}
+def shown(proposal: Proposal, units: Units) -> tuple[GainSetting, ...]:
+    """The controller's own settings; the canonical numbers of the ideal form where its form is undeclared."""
+    if proposal.settings:
+        return proposal.settings
+    found = [GainSetting(name="K", value=proposal.proportional_gain, unit=units.gain)]
+    if proposal.integral_time_s is not None:
+        found.append(GainSetting(name="Ti", value=proposal.integral_time_s, unit="s"))
+    if proposal.derivative_time_s:
+        found.append(GainSetting(name="Td", value=proposal.derivative_time_s, unit="s"))
+    return tuple(found)
+
+
+def _row(proposal: Proposal, names: list[tuple[str, str]], units: Units) -> list[RenderableType]:
+    values = {(s.name, s.unit): figure(s.value, 4) for s in shown(proposal, units)}
     margins = proposal.margins
     cells: list[RenderableType] = [
         Text("▶", style="green") if proposal.recommended else "",
@@ -174,13 +186,11 @@ def _row(proposal: Proposal, names: list[tuple[str, str]]) -> list[RenderableTyp
     return [*cells, figure(margins.gain_margin, 3), phase, Text(f"{sensitivity:.2f}", style=style)]
 
 
-def _chosen(proposal: Proposal) -> RenderableType:
-    settings = ", ".join(f"{s.name} {with_unit(s.value, s.unit, 4)}" for s in proposal.settings)
+def _chosen(proposal: Proposal, units: Units) -> RenderableType:
+    settings = ", ".join(f"{s.name} {with_unit(s.value, s.unit, 4)}" for s in shown(proposal, units))
     name = f"{title(proposal.rule)} {proposal.controller_kind}"
     lines = [
-        Text.assemble(
-            ("▶ ", "green"), (f"{name}: {settings or 'see the record'}", "bold"), f", {proposal.action} acting"
-        ),
+        Text.assemble(("▶ ", "green"), (f"{name}: {settings}", "bold"), f", {proposal.action} acting"),
         Text(f"  {proposal.equation}"),
         Text(f"  hand check: {proposal.hand_check}"),
         *(Text(f"  ! {caution}", style="yellow") for caution in proposal.cautions),

@@ -59,7 +59,7 @@ def analysis_view(analysis: AnalysisReply, units: Units, truth: Truth | None = N
     if analysis.findings:
         parts += [section("Findings"), _indented(findings_view(analysis.findings))]
     if analysis.proposals or analysis.refused_rules:
-        parts += [section("Proposals"), _indented(proposals_view(analysis.proposals, analysis.refused_rules))]
+        parts += [section("Proposals"), _indented(proposals_view(analysis.proposals, analysis.refused_rules, units))]
     return Group(*parts)
 
 
