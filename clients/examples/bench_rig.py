@@ -10,12 +10,13 @@ Exit status: 0 gains were proposed; 1 none were; 3 the service refused or cannot
 
 from __future__ import annotations
 
+import contextlib
 import json
 import sys
 from pathlib import Path
 
 from gainwright_client import Client, ClientError
-from gainwright_client.errors import Conflict
+from gainwright_client.errors import Conflict, NotActive
 from gainwright_wire.tasks import BENCH_SENTENCE, Experiment, StartExperiment, StreamProgress
 
 
@@ -42,7 +43,8 @@ def test_loop(client: Client, definition: dict[str, object]) -> Experiment:
                     last = told.number
         except KeyboardInterrupt:
             print("stop asked for; waiting for the exit")
-            client.stop_experiment(started.id)
+            with contextlib.suppress(NotActive):
+                client.stop_experiment(started.id)
 
 
 def main() -> int:

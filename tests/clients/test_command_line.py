@@ -11,15 +11,16 @@ from typing import Any
 
 import pytest
 import typer
+from rich.console import Console
 from typer.testing import CliRunner
 
 from gainwright_client import errors
 from gainwright_client.commands import app
-from gainwright_client.commands.asking import bench_questions
+from gainwright_client.commands.asking import ask_plant, bench_questions, read_answers
 from gainwright_client.commands.exit_codes import MEANINGS, ExitCode, of_experiment
 from gainwright_client.commands.failing import code_of
 from gainwright_service.forecasting import forecast
-from gainwright_wire.tasks import Exit, ForecastRequest, Outcome
+from gainwright_wire.tasks import Answer, Exit, ForecastRequest, Outcome
 from relay_records import relay_record
 from service_loops import a_loop
 
@@ -182,6 +183,25 @@ def test_loop_add_refuses_a_file_that_holds_no_loops(tmp_path: Path, text: str, 
     code, _, said = run("loop", "add", str(path))
     assert code == ExitCode.MALFORMED_FILE
     assert problem in said
+
+
+def test_plant_asks_for_every_item_that_nobody_answered_and_a_caution_for_its_reason() -> None:
+    sheet = forecast(a_loop(loop_class="plant"), ForecastRequest()).checklist
+    unanswered = [item.id for item in sheet.items if item.basis == "unanswered"]
+    given = read_answers({unanswered[0]: {"verdict": "pass"}})
+    found: dict[str, Answer] = {}
+    asking = typer.Typer()
+
+    @asking.command()
+    def ask() -> None:
+        found.update(ask_plant(sheet, given, Console()))
+
+    said = "perhaps\npass\n" + "caution\npermit to be renewed at noon\n" + "fail\n" * len(unanswered)
+    done = CliRunner().invoke(asking, [], input=said)
+    assert done.exit_code == 0, done.output
+    assert list(found) == unanswered
+    assert [found[item].verdict for item in unanswered[:4]] == ["pass", "pass", "caution", "fail"]
+    assert found[unanswered[2]].reason == "permit to be renewed at noon"
 
 
 def test_a_bench_start_asks_five_questions_with_the_loops_own_numbers() -> None:
