@@ -125,6 +125,13 @@ def test_an_unverified_exit_fails_its_starred_items() -> None:
     assert {i: _item(sheet, i).verdict for i in ("A1", "A2", "D7")} == dict.fromkeys(("A1", "A2", "D7"), "fail")
 
 
+@pytest.mark.parametrize(("outcome", "verdict"), [("stopped", "pass"), ("yielded", "fail"), ("lost", "fail")])
+def test_an_exit_that_was_not_written_passes_only_where_nothing_was_moved(outcome: str, verdict: str) -> None:
+    ended = {"outcome": outcome, "exit": "not_written", "exit_detail": "", "limit": None}
+    sheet = Checklist.model_validate(conclude_experiment(_facts(ended=ended))["checklist"])
+    assert {i: _item(sheet, i).verdict for i in ("A1", "A2")} == dict.fromkeys(("A1", "A2"), verdict)
+
+
 def test_a_limit_names_its_item_number_and_bound() -> None:
     limit = {"item": "D1", "number": 3.7, "bound": 3.0, "unit": "degC", "sentence": "beyond the allowed deviation"}
     ended = {"outcome": "limited", "exit": "verified", "exit_detail": "", "limit": limit}

@@ -122,11 +122,20 @@ def _exit(plan: Plan, end: Conclusion) -> Measurement:
     back = judge("A1", end.last_deviation / allowed, end.exit_detail)
     if end.exit is Exit.VERIFIED:
         return back
+    if _untouched(end):
+        return Measurement(back.verdict, back.value, back.limit, "nothing was moved, so nothing is to be handed back")
     detail = f"exit {end.exit.value}: {end.exit_detail}".rstrip(": ")
     return Measurement(Verdict.FAIL, back.value, back.limit, detail)
 
 
+def _untouched(end: Conclusion) -> bool:
+    """Whether the test ended before it had moved anything. After a yield or a lost link an exit is left out as well."""
+    return end.exit is Exit.NOT_WRITTEN and end.outcome not in (Outcome.YIELDED, Outcome.LOST)
+
+
 def _as_found(end: Conclusion) -> Measurement:
+    if _untouched(end):
+        return Measurement(Verdict.PASS, detail="nothing was written")
     if end.exit is not Exit.VERIFIED:
         return Measurement(Verdict.FAIL, detail="; ".join(end.differences) or "not verified")
     if end.differences:
