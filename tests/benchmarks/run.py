@@ -1,6 +1,7 @@
 """Runs every benchmark of this folder, one after the other, and prints their tables.
 
-Fails where there is none: a figure that nobody measured was not reached. Each benchmark is a script of its own with a `main(argv) -> int`; 0 means that every wanted figure was reached.
+Each benchmark is a script of its own with a `main(argv) -> int`; 0 means that every wanted figure was reached. Fails
+where there is no benchmark: a figure that nobody measured was not reached.
 """
 
 from __future__ import annotations
