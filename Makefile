@@ -31,12 +31,12 @@ $(BIN)/python:
 
 $(RUN): pyproject.toml constraints.txt | $(BIN)/python
 	@echo "Installing Gainwright into $(VENV) (once)."
-	@$(PIP) --editable .
+	@began=$$(date +%s); $(PIP) --editable . && echo "Installed in $$(( $$(date +%s) - began )) s."
 	@touch $@
 
 $(DEV): pyproject.toml constraints.txt | $(BIN)/python
 	@echo "Installing Gainwright and its test tools into $(VENV) (once)."
-	@$(PIP) --editable ".[dev]"
+	@began=$$(date +%s); $(PIP) --editable ".[dev]" && echo "Installed in $$(( $$(date +%s) - began )) s."
 	@touch $@ $(RUN)
 
 clean:
