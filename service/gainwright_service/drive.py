@@ -125,6 +125,8 @@ class Drive:
     async def _write(self, output: float, *, urgent: bool) -> None:
         started = self._clock.monotonic_s()
         self.commanded = output
+        # Before the exchange too: a write that fails may have been taken, and its echo is nobody else's doing.
+        self._guard = self._guard.wrote(output, started)
         await self._adapter.write(output, urgent=urgent)
         ended = self._clock.monotonic_s()
         # The guard compares echoes only from readings taken after the write was answered.

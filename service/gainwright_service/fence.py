@@ -8,6 +8,7 @@ from __future__ import annotations
 
 import fcntl
 import hashlib
+import os
 from pathlib import Path
 from typing import IO, Protocol
 
@@ -52,8 +53,10 @@ class FileFence:
         return True
 
     async def held(self) -> bool:
-        """A file lock is lost only with the file itself."""
-        return self._file is not None and self._path.exists()
+        """A file lock is lost only with the file itself; another file of its name is another lock."""
+        if self._file is None or not self._path.exists():
+            return False
+        return os.fstat(self._file.fileno()).st_ino == self._path.stat().st_ino
 
     async def release(self) -> None:
         """Unlock."""

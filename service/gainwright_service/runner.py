@@ -185,6 +185,9 @@ class _Runner:
         machine = self._machine
         facts = machine.facts
         detail = machine.detail
+        if self._left_armed():
+            detail += f"; the device's watchdog is left armed and acts ({self._plan.watchdog}) in " \
+                      f"{self._plan.watchdog_timeout_s:g} s"  # fmt: skip
         if self._disarm_failed and self._plan.watchdog_timeout_s is not None:
             detail += f"; the device's watchdog could not be disarmed and may move the output in " \
                       f"{self._plan.watchdog_timeout_s:g} s"  # fmt: skip
@@ -197,6 +200,14 @@ class _Runner:
             progress=self._progress(self._clock.monotonic_s()),
             latency_s=self._drive.latency_s,
         )
+
+    def _left_armed(self) -> bool:
+        """Whether an armed watchdog is the last safeguard of a loop that could not be given back for certain."""
+        machine, timeout = self._machine, self._plan.watchdog_timeout_s
+        if timeout is None or self._plan.watchdog == "none" or machine.facts is None:
+            return False
+        lost = machine.exit is Exit.NOT_WRITTEN and machine.outcome is Outcome.LOST
+        return machine.exit is Exit.UNVERIFIED or lost
 
     async def _tick(self) -> None:
         urgent = self._machine.state in DRIVING and self._machine.state not in TESTING

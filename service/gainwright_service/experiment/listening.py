@@ -54,6 +54,9 @@ def listened(baseline: Baseline, plan: Plan) -> Facts | Trip:
         return Trip("D7", len(baseline.values), 8, "", "too few good readings while listening", link=True)
     if len(baseline.modes) > 1:
         return Trip("D6", len(baseline.modes), 1, "", "the mode changed while listening", yields=True)
+    moved = _moved_by_hand(baseline, plan)
+    if moved is not None:
+        return moved
     mean, slope, noise = _trend(baseline.times, baseline.values)
     quantum = _quantum(baseline.values)
     resting = plan.resting_output
@@ -85,6 +88,15 @@ def listened(baseline: Baseline, plan: Plan) -> Facts | Trip:
         exit_output=plan.exit_value if plan.exit_value is not None else resting,
     )
     return _refusal(found, plan, baseline, narrowest) or found
+
+
+def _moved_by_hand(baseline: Baseline, plan: Plan) -> Trip | None:
+    """In manual nobody but a person moves the output; a mean over such a move would be a bump of its own."""
+    if baseline.outputs and Mode.MANUAL in baseline.modes:
+        spread, bound = max(baseline.outputs) - min(baseline.outputs), 2 * plan.echo_tolerance
+        if spread > bound:
+            return Trip("D6", spread, bound, "", "somebody moved the output while listening", yields=True)
+    return None
 
 
 def _refusal(found: Facts, plan: Plan, baseline: Baseline, narrowest: float) -> Trip | None:

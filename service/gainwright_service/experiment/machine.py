@@ -375,8 +375,8 @@ class Machine:
         finish = Finish(outcome, ended, self.detail)
         # A watchdog is disarmed where the exit is verified or somebody else has the loop; otherwise it stays the
         # last safeguard and is left armed, loud in the detail.
-        leave_armed = ended in (Exit.UNVERIFIED,)
-        return (Disarm(), finish) if disarm and not leave_armed else (finish,)
+        settled = ended in (Exit.VERIFIED, Exit.NOT_OURS) or outcome is Outcome.YIELDED
+        return (Disarm(), finish) if disarm and settled else (finish,)
 
     def _wait(self, event: Event) -> Commands:
         return ()

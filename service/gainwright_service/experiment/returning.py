@@ -67,6 +67,8 @@ class Return:
     written_at: float = 0.0
     repeats: int = 0
     proofs: int = 0
+    strange: int = 0
+    matched: bool = False
     restoring: bool = False
     asked_mode_at: float = 0.0
     mode_repeats: int = 0
@@ -83,6 +85,11 @@ class Return:
                 return (), Ending(Exit.NOT_OURS, "the loop is not as we left it: nothing was written")
             self.read_first = False
             return self._write(now), None
+        if reading.taken_at < self.written_at:
+            # Taken before the write that it would prove.
+            return NOTHING
+        if reading.mode not in (Mode.MANUAL, Mode.UNKNOWN):
+            return self._stranger(f"the mode is {reading.mode}, not the manual that the test set")
         if self.issued != self.exit_output:
             return self._write(now), None
         if reading.controller_output is None:
@@ -90,7 +97,10 @@ class Return:
                 return (), Ending(Exit.UNVERIFIED, f"exit output {self.exit_output:g} written; no echo to verify it")
             return NOTHING
         if abs(reading.controller_output - self.exit_output) > self.plan.echo_tolerance:
+            if self.matched:
+                return self._stranger(f"the output was {self.exit_output:g} and now is {reading.controller_output:g}")
             return self._not_obeyed(now, reading.controller_output)
+        self.matched, self.strange = True, 0
         self.proofs += 1
         if self.proofs < PROOFS:
             return NOTHING
@@ -145,8 +155,16 @@ class Return:
         self.issued = self.exit_output if step == self.exit_output - self.issued else self.issued + step
         self.exit_asked = True
         self.written_at = now
-        self.proofs = 0
+        self.proofs, self.strange, self.matched = 0, 0, False
         return (WriteExit(self.issued),)
+
+    def _stranger(self, what: str) -> Step:
+        """Somebody else acts, on two readings in a row: nothing more is written."""
+        self.proofs = 0
+        self.strange += 1
+        if self.strange < PROOFS:
+            return NOTHING
+        return (), Ending(Exit.NOT_OURS, f"somebody else acts: {what}; nothing more was written")
 
     def _not_obeyed(self, now: float, echo: float) -> Step:
         self.proofs = 0
