@@ -27,12 +27,13 @@ def _nothing_leaked(request: pytest.FixtureRequest) -> Iterator[None]:
     """A test leaves no thread of its own and no child process behind."""
     before = set(threading.enumerate())
     yield
-    # anyio's idle threads end by themselves with their event loop.
-    left = [
-        t.name
-        for t in threading.enumerate()
-        if t not in before and not t.daemon and t.is_alive() and not t.name.startswith("AnyIO")
+    # anyio's idle threads end by themselves with their event loop; a thread told to end may still be ending.
+    started = [
+        t for t in threading.enumerate() if t not in before and not t.daemon and not t.name.startswith("AnyIO")
     ]
+    for thread in started:
+        thread.join(2.0)
+    left = [f"{thread.name} ({type(thread).__name__})" for thread in started if thread.is_alive()]
     assert not left, f"threads left running: {left}"
     children = [child.name for child in multiprocessing.active_children()]
     assert not children, f"child processes left running: {children}"

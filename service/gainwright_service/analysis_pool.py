@@ -62,11 +62,15 @@ class AnalysisPool:
         if pool is None:
             return
         processes = list((getattr(pool, "_processes", None) or {}).values())
+        # The pool's own thread watches its processes and ends once it has seen them die; waited for, with a bound.
+        watching = getattr(pool, "_executor_manager_thread", None)
         pool.shutdown(wait=False, cancel_futures=True)
         for process in processes:
             process.kill()
         for process in processes:
             process.join(2.0)
+        if watching is not None:
+            watching.join(2.0)
 
     def _open(self) -> ProcessPoolExecutor:
         if self._pool is None:
