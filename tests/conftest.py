@@ -28,9 +28,7 @@ def _nothing_leaked(request: pytest.FixtureRequest) -> Iterator[None]:
     before = set(threading.enumerate())
     yield
     # anyio's idle threads end by themselves with their event loop; a thread told to end may still be ending.
-    started = [
-        t for t in threading.enumerate() if t not in before and not t.daemon and not t.name.startswith("AnyIO")
-    ]
+    started = [t for t in threading.enumerate() if t not in before and not t.daemon and not t.name.startswith("AnyIO")]
     for thread in started:
         thread.join(2.0)
     left = [f"{thread.name} ({type(thread).__name__})" for thread in started if thread.is_alive()]

@@ -66,22 +66,20 @@ def response_points(
     return tuple(found)
 
 
-def fundamental(time: FloatArray, value: FloatArray, start: float, end: float, cycles: int) -> complex:
-    """Fourier coefficient of a signal at the fundamental over a window of whole cycles, unscaled.
+def phasor(time: FloatArray, value: FloatArray, omega: float) -> complex:
+    """Phasor of a signal at one frequency, by least squares beside its mean: ``value ~ mean + Re(X exp(j omega t))``.
 
     Parameters
     ----------
-    time, value : ndarray, shape (n,)
-    start, end : float, seconds
-        The window; samples inside it are taken.
-    cycles : int
-        Whole cycles in the window.
+    time, value : ndarray, shape (n,), n >= 3
+        Evenly spaced or not; time counts from its first sample.
+    omega : float, rad/s
 
     Returns
     -------
     complex
     """
-    inside = (time >= start) & (time <= end)
-    at, what = time[inside], value[inside]
-    weighted = (what - np.mean(what)) * np.exp(-2j * np.pi * cycles / (end - start) * (at - start))
-    return complex(np.sum((weighted[1:] + weighted[:-1]) * np.diff(at) / 2))
+    turned = omega * (time - time[0])
+    columns = np.stack([np.cos(turned), -np.sin(turned), np.ones_like(turned)], axis=1)
+    sizes, *_ = np.linalg.lstsq(columns, value, rcond=None)
+    return complex(sizes[0], sizes[1])

@@ -52,6 +52,7 @@ class Structure(StrEnum):
     FIRST_ORDER = "first_order_dead_time"
     SECOND_ORDER = "second_order_dead_time"
     SECOND_ORDER_COMPLEX = "second_order_complex_dead_time"
+    THIRD_ORDER = "third_order_dead_time"
     THIRD_ORDER_ZERO = "third_order_zero_dead_time"
     INTEGRATING = "integrating_dead_time"
     INTEGRATING_LAG = "integrating_lag_dead_time"

@@ -1,0 +1,110 @@
+"""Answers of exponential modes to a piecewise-constant output, with their derivatives.
+
+Owns the modal arithmetic of fits: a process of distinct poles is a sum of modes ``1/(s - p)``; under an output that
+only changes at known times, each mode is one exponential per sample from its state at the last change, and a change
+of the pole is another such mode. Knows no structures, gains or noise.
+"""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+
+import numpy as np
+import numpy.typing as npt
+
+from gainwright.record import Record
+
+FloatArray = npt.NDArray[np.float64]
+ComplexArray = npt.NDArray[np.complex128]
+
+UNDERFLOW = -700.0
+
+
+@dataclass(frozen=True, slots=True, eq=False)
+class Drive:
+    """An output as its changes from the level at which the record begins.
+
+    Parameters
+    ----------
+    times : ndarray, shape (m,), seconds, increasing
+        Instants of the changes; at least one.
+    levels : ndarray, shape (m,), output units
+        Deviation from the first level from each change on.
+    """
+
+    times: FloatArray
+    levels: FloatArray
+
+    @classmethod
+    def of(cls, record: Record) -> Drive:
+        """The drive of a record's output column."""
+        output = record.controller_output
+        places = np.flatnonzero(np.diff(output) != 0) + 1
+        return cls(record.time[places], output[places] - output[0])
+
+    def level(self, time: FloatArray) -> FloatArray:
+        """Deviation in force at ``time`` (seconds), shape of ``time``."""
+        place = np.searchsorted(self.times, time, side="right") - 1
+        return np.where(place >= 0, self.levels[np.maximum(place, 0)], 0.0)
+
+
+def mode_answers(drive: Drive, poles: ComplexArray, time: FloatArray) -> tuple[ComplexArray, ComplexArray]:
+    """Answers of the modes ``1/(s - p)`` to a drive, from rest, and their derivatives by the pole.
+
+    With ``m' = p m + u`` and ``q = dm/dp``, so that ``q' = p q + m``.
+
+    Parameters
+    ----------
+    drive : Drive
+    poles : ndarray of complex, shape (..., k), 1/s, not zero
+    time : ndarray, shape (n,) or (..., n), seconds
+        Already less the dead time.
+
+    Returns
+    -------
+    tuple of two ndarray of complex, shape (..., k, n)
+    """
+    states, slopes = _at_changes(drive, poles)
+    place = np.searchsorted(drive.times, time, side="right") - 1
+    before = place < 0
+    place = np.maximum(place, 0)
+    since = np.where(before, 0.0, time - drive.times[place])[..., None, :]
+    level = np.where(before, 0.0, drive.levels[place])[..., None, :]
+    at = np.broadcast_to(place[..., None, :], (*states.shape[:-1], time.shape[-1]))
+    pole = poles[..., None]
+    decay, filled, filled_slope = _advance(pole, since)
+    state = np.take_along_axis(states, at, axis=-1)
+    slope = np.take_along_axis(slopes, at, axis=-1)
+    answers = decay * state + filled * level
+    derivatives = decay * (slope + since * state) + filled_slope * level
+    return answers, derivatives
+
+
+def _at_changes(drive: Drive, poles: ComplexArray) -> tuple[ComplexArray, ComplexArray]:
+    """Modes and derivatives at each change, shape (..., k, m)."""
+    states = np.zeros((*poles.shape, drive.times.size), dtype=np.complex128)
+    slopes = np.zeros_like(states)
+    lengths = np.diff(drive.times)
+    decay, filled, filled_slope = _advance(poles[..., None], lengths)
+    forced, forced_slope = filled * drive.levels[:-1], filled_slope * drive.levels[:-1]
+    state = np.zeros(poles.shape, dtype=np.complex128)
+    slope = np.zeros(poles.shape, dtype=np.complex128)
+    for k in range(lengths.size):
+        slope = decay[..., k] * (slope + lengths[k] * state) + forced_slope[..., k]
+        state = decay[..., k] * state + forced[..., k]
+        states[..., k + 1], slopes[..., k + 1] = state, slope
+    return states, slopes
+
+
+def _advance(pole: ComplexArray, length: FloatArray) -> tuple[ComplexArray, ComplexArray, ComplexArray]:
+    """``exp(p h)``, ``(exp(p h) - 1)/p`` and the derivative of the latter by p."""
+    exponent = pole * length
+    exponent = np.where(exponent.real < UNDERFLOW, UNDERFLOW, exponent)
+    decay = np.exp(exponent)
+    small = np.abs(exponent) < 1e-3
+    # Below a thousandth the difference loses digits; four terms of the series are exact there.
+    series = length * (1.0 + exponent / 2.0 * (1.0 + exponent / 3.0 * (1.0 + exponent / 4.0)))
+    slope_series = length**2 * (0.5 + exponent / 3.0 * (1.0 + exponent * 0.375 * (1.0 + exponent * 4.0 / 15.0)))
+    filled = np.where(small, series, (decay - 1.0) / pole)
+    slope = np.where(small, slope_series, (length * decay - filled) / pole)
+    return decay, filled, slope

@@ -1,0 +1,257 @@
+"""Which structures explain a record, beside which disturbances and in what noise.
+
+Owns the order in which a record is explained: every structure alone; the disturbances that what is left calls for;
+the noise's colour; every structure that is still in question again. Strategy: a disturbance is tried by the score of
+its column with the fit's own tangents taken out, after the structures with a zero, since a missing zero looks like a
+load; it must also be of a size that matters, since a structure's own misfit is never noise.
+"""
+
+from __future__ import annotations
+
+import math
+from collections.abc import Iterable
+from dataclasses import dataclass, replace
+
+import numpy as np
+import numpy.typing as npt
+
+from gainwright.columns import Upsets, answers_of
+from gainwright.cycles import Cycles
+from gainwright.fitting import EXACT, TINY, Fit, Problem, best_starts, fit
+from gainwright.modes import UNDERFLOW, Drive
+from gainwright.record import Record
+from gainwright.structures import FAMILY, Shape
+
+FloatArray = npt.NDArray[np.float64]
+
+MOST_UPSETS = 3
+MOST_COLOURS = 2
+SAME_COLOUR = 0.05
+MOST_MISSING = 4
+LEAST_SAMPLES = 20
+"""Fewer samples than this are hardly more than the numbers to be fitted."""
+MOSTLY_MISFIT = 0.5
+"""A residual of which this share comes again in every cycle is misfit: it has no colour to be whitened by."""
+LOAD_TIMES = 72
+SCORE = 12.0
+"""Least fall of the squared residual, in variances, for a disturbance: some four standard errors."""
+SCORE_LOAD = 20.0
+"""The same for a load, whose time is looked for as well."""
+LEAST_LOAD = 0.01
+"""Least load, as a share of the relay amplitude."""
+LEAST_RAMP = 0.003
+"""Least drift a cycle, as a share of the swing."""
+LEAST_START = 0.02
+"""Least deviation from rest at the record's begin, as a share of the swing."""
+AT_REST = 0.25
+"""Periods of quiet baseline from which a record can be trusted to begin at rest."""
+
+
+@dataclass(frozen=True, slots=True, eq=False)
+class Explanation:
+    """A record explained.
+
+    Parameters
+    ----------
+    fits : list of Fit
+        Every structure, best first, all beside the same disturbances and in the same noise; may be empty.
+    misfit : float, PV units
+        What the best fit leaves over that comes again in every cycle: no noise, but the structure's own error.
+    """
+
+    fits: list[Fit]
+    misfit: float
+
+
+def explain(record: Record, cycles: Cycles) -> Explanation:
+    """Every structure that explains a record, best first.
+
+    Parameters
+    ----------
+    record : Record
+    cycles : Cycles
+        With at least one scored cycle.
+
+    Returns
+    -------
+    Explanation
+    """
+    swing = float(np.mean(cycles.swings))
+    problem = _problem(record, cycles)
+    fits = _fits(problem, FAMILY) if problem.time.size >= LEAST_SAMPLES else []
+    if not fits:
+        return Explanation([], 0.0)
+    doubtful = _doubtful_changes(record)
+    if doubtful:
+        fits = _refitted(_sharpened(fits[0], doubtful), fits)
+    fits = _disturbed(fits, cycles, swing)
+    if doubtful:
+        fits = _refitted(_sharpened(fits[0], doubtful), fits)
+    for _ in range(MOST_COLOURS):
+        share = _misfit_share(fits[0], record, cycles)
+        correlation = 0.0 if share > MOSTLY_MISFIT else fits[0].correlation
+        if abs(correlation - fits[0].problem.correlation) < SAME_COLOUR:
+            break
+        fits = _disturbed(_refitted(fits[0].problem.in_colour(correlation), fits), cycles, swing)
+    share = _misfit_share(fits[0], record, cycles)
+    return Explanation(fits, math.sqrt(share * float(np.mean(fits[0].residual ** 2))))
+
+
+def _misfit_share(best: Fit, record: Record, cycles: Cycles) -> float:
+    """Share of the best fit's squared residual that comes again from cycle to cycle; 0 where nothing tells."""
+    if cycles.count < 2:
+        return 0.0
+    edges = record.time[cycles.switches[cycles.scored]]
+    time, residual = best.problem.time, best.residual
+    inside = (time >= edges[-2]) & (time < edges[-1])
+    if np.count_nonzero(inside) < 8:
+        return 0.0
+    before = np.interp(time[inside] - (edges[-1] - edges[-2]), time, residual)
+    power = float(np.mean(residual[inside] ** 2) + np.mean(before**2)) / 2
+    return max(0.0, 1.0 - float(np.mean((residual[inside] - before) ** 2)) / 2 / power) if power > 0 else 0.0
+
+
+def _disturbed(fits: list[Fit], cycles: Cycles, swing: float) -> list[Fit]:
+    """The fits beside the disturbances that the best one without a zero calls for, where those explain more."""
+    plain = [one for one in fits if not one.shape.zero]
+    if not plain:
+        return fits
+    best = plain[0]
+    for _ in range(MOST_UPSETS):
+        tried = [
+            fit(best.problem.with_upsets(upsets), best.shape, best.parameters)
+            for upsets in _called_for(best, cycles, swing)
+        ]
+        better = [one for one in tried if one is not None and one.own_colour_criterion < best.own_colour_criterion]
+        if not better:
+            break
+        best = min(better, key=lambda one: one.own_colour_criterion)
+    if best.problem.upsets == plain[0].problem.upsets:
+        return fits
+    again = _refitted(best.problem, fits)
+    return again if again and again[0].own_colour_criterion < fits[0].own_colour_criterion else fits
+
+
+def _problem(record: Record, cycles: Cycles) -> Problem:
+    problem = Problem.of(record, cycles.period)
+    baseline = float(record.time[cycles.switches[0]] - record.time[0])
+    if baseline >= AT_REST * cycles.period:
+        return problem
+    # What was on its way before the record began is not known: half a period covers any dead time.
+    return problem.with_upsets(Upsets(from_rest=False)).later_than(float(record.time[0]) + 0.5 * cycles.period)
+
+
+def _fits(problem: Problem, shapes: Iterable[Shape]) -> list[Fit]:
+    """Each structure from the best starts of its grid; one with a zero from the same structure without it as well."""
+    found: dict[str, Fit] = {}
+    for shape in shapes:
+        starts = best_starts(problem, shape)
+        if shape.zero and "third" in found:
+            starts = [starts[0], *_beside(found["third"])]
+        tried = [one for one in (fit(problem, shape, start) for start in starts) if one is not None]
+        if tried:
+            found[shape.name] = min(tried, key=lambda one: one.criterion)
+    return sorted(found.values(), key=lambda one: one.criterion)
+
+
+def _refitted(problem: Problem, fits: list[Fit]) -> list[Fit]:
+    """The fits again for another problem, from where they stand."""
+    found: dict[str, Fit] = {}
+    for one in sorted(fits, key=lambda one: one.shape.zero):
+        starts = [one.parameters[: one.shape.parameters]]
+        if one.shape.zero and "third" in found:
+            starts.extend(_beside(found["third"]))
+        tried = [again for again in (fit(problem, one.shape, start) for start in starts) if again is not None]
+        if tried:
+            found[one.shape.name] = min(tried, key=lambda again: again.criterion)
+    return sorted(found.values(), key=lambda again: again.criterion)
+
+
+def _beside(third: Fit) -> list[FloatArray]:
+    """Starts for a zero from the fit without one, which itself is a saddle: there a zero is a dead time."""
+    own = third.parameters[: third.shape.parameters]
+    return [np.concatenate([[own[0] * share], own[1:]]) for share in (0.4, 1.6)]
+
+
+def _doubtful_changes(record: Record) -> list[tuple[int, float]]:
+    """Changes of the output that follow a gap, so that they may have come with a sample that is missing: the place
+    among the changes and the time of the missing sample."""
+    places = np.flatnonzero(np.diff(record.controller_output) != 0) + 1
+    steps = np.diff(record.time)
+    nominal = float(np.median(steps))
+    found = []
+    for number, place in enumerate(places):
+        missing = round(float(steps[place - 1]) / nominal) - 1
+        if 1 <= missing <= MOST_MISSING:
+            found.extend([(number, float(record.time[place] - nominal * k)) for k in range(1, missing + 1)])
+    return found
+
+
+def _sharpened(best: Fit, doubtful: list[tuple[int, float]]) -> Problem:
+    """The problem with each doubtful change where the best fit explains the record best."""
+    problem = best.problem
+    least = _left(problem, best)
+    for number, at in doubtful:
+        times = problem.drive.times.copy()
+        times[number] = at
+        moved = replace(problem, drive=Drive(times, problem.drive.levels))
+        left = _left(moved, best)
+        if left < least:
+            problem, least = moved, left
+    return problem
+
+
+def _left(problem: Problem, best: Fit) -> float:
+    """Squared residual at a fit's nonlinear parameters, the sizes fitted anew."""
+    share = float(best.linear[1] / best.linear[0]) if best.shape.zero else 0.0
+    columns = problem.whitening(problem.columns(best.shape, best.parameters, share).matrix)
+    basis, _ = np.linalg.qr(columns / (np.sqrt(np.sum(columns**2, axis=0)) + TINY))
+    value = problem.whitening(problem.value)
+    return float(value @ value - np.sum((basis.T @ value) ** 2))
+
+
+def _called_for(best: Fit, cycles: Cycles, swing: float) -> list[Upsets]:
+    """The further disturbances, one at a time, that the best fit's residual calls for."""
+    upsets, problem = best.problem.upsets, best.problem
+    variance = best.variance
+    if variance <= EXACT * swing**2:
+        return []
+    basis, _ = np.linalg.qr(best.tangents / (np.sqrt(np.sum(best.tangents**2, axis=0)) + TINY))
+    span = float(problem.time[-1] - problem.time[0])
+
+    def score(columns: FloatArray) -> tuple[FloatArray, FloatArray]:
+        white = problem.whitening(columns)
+        white = white - basis @ (basis.T @ white)
+        power = np.sum(white**2, axis=0)
+        size = np.where(power > 1e-9 * np.sum(columns**2, axis=0), (white.T @ best.white) / np.maximum(power, TINY), 0)
+        return size**2 * power / variance, size
+
+    candidates: list[Upsets] = []
+    if not upsets.drift:
+        ramp = (problem.time - problem.time[0]) / span - 0.5
+        gained, size = score(ramp[:, None])
+        if gained[0] > SCORE and abs(size[0]) * cycles.period / span > LEAST_RAMP * swing:
+            candidates.append(replace(upsets, drift=True))
+    if upsets.load_at is None:
+        times = np.linspace(problem.time[0], problem.time[-1], LOAD_TIMES + 2)[1:-1]
+        gained, size = score(_load_columns(best, times))
+        place = int(np.argmax(gained))
+        if gained[place] > SCORE_LOAD and abs(size[place]) > LEAST_LOAD * cycles.amplitude:
+            candidates.append(replace(upsets, load_at=float(times[place])))
+    if upsets.from_rest:
+        poles, _ = best.shape.poles(best.parameters[: best.shape.parameters], problem.period)
+        slow = poles.real[:, None] * (problem.time - problem.time[0])
+        gained, size = score(np.exp(np.maximum(slow, UNDERFLOW)).T)
+        if np.max(gained) > SCORE and np.max(np.abs(size)) > LEAST_START * swing:
+            candidates.append(replace(upsets, from_rest=False))
+    return candidates
+
+
+def _load_columns(best: Fit, times: FloatArray) -> FloatArray:
+    """The fitted process's answers to unit loads at given times, shape (n, t)."""
+    problem, own = best.problem, best.shape.parameters
+    one = Drive(np.zeros(1), np.ones(1))
+    shifted = problem.time[None, :] - times[:, None]
+    repeated = np.repeat(best.parameters[None, :own], times.size, axis=0)
+    answers = answers_of(best.shape, repeated, problem.period, one, shifted)
+    return np.asarray(np.einsum("p,gpn->ng", best.linear[: best.paths], answers))
