@@ -16,8 +16,10 @@ from gainwright.record import Record
 
 FloatArray = npt.NDArray[np.float64]
 ComplexArray = npt.NDArray[np.complex128]
+AnyArray = npt.NDArray[np.float64] | npt.NDArray[np.complex128]
 
 UNDERFLOW = -700.0
+SMALL = 1e-3
 
 
 @dataclass(frozen=True, slots=True, eq=False)
@@ -48,7 +50,7 @@ class Drive:
         return np.where(place >= 0, self.levels[np.maximum(place, 0)], 0.0)
 
 
-def mode_answers(drive: Drive, poles: ComplexArray, time: FloatArray) -> tuple[ComplexArray, ComplexArray]:
+def mode_answers(drive: Drive, poles: ComplexArray, time: FloatArray) -> tuple[AnyArray, AnyArray]:
     """Answers of the modes ``1/(s - p)`` to a drive, from rest, and their derivatives by the pole.
 
     With ``m' = p m + u`` and ``q = dm/dp``, so that ``q' = p q + m``.
@@ -62,49 +64,53 @@ def mode_answers(drive: Drive, poles: ComplexArray, time: FloatArray) -> tuple[C
 
     Returns
     -------
-    tuple of two ndarray of complex, shape (..., k, n)
+    tuple of two ndarray, shape (..., k, n)
+        Real where all poles are.
     """
-    states, slopes = _at_changes(drive, poles)
+    pole: AnyArray = poles if np.any(poles.imag) else poles.real
+    states, slopes = _at_changes(drive, pole)
     place = np.searchsorted(drive.times, time, side="right") - 1
-    before = place < 0
+    seen = place >= 0
     place = np.maximum(place, 0)
-    since = np.where(before, 0.0, time - drive.times[place])[..., None, :]
-    level = np.where(before, 0.0, drive.levels[place])[..., None, :]
+    since = ((time - drive.times[place]) * seen)[..., None, :]
+    level = (drive.levels[place] * seen)[..., None, :]
     at = np.broadcast_to(place[..., None, :], (*states.shape[:-1], time.shape[-1]))
-    pole = poles[..., None]
-    decay, filled, filled_slope = _advance(pole, since)
-    state = np.take_along_axis(states, at, axis=-1)
-    slope = np.take_along_axis(slopes, at, axis=-1)
-    answers = decay * state + filled * level
-    derivatives = decay * (slope + since * state) + filled_slope * level
-    return answers, derivatives
+    state, slope = np.take_along_axis(states, at, axis=-1), np.take_along_axis(slopes, at, axis=-1)
+    decay, filled, filled_slope = _advance(pole[..., None], since)
+    return decay * state + filled * level, decay * (slope + since * state) + filled_slope * level
 
 
-def _at_changes(drive: Drive, poles: ComplexArray) -> tuple[ComplexArray, ComplexArray]:
+def _at_changes(drive: Drive, poles: AnyArray) -> tuple[AnyArray, AnyArray]:
     """Modes and derivatives at each change, shape (..., k, m)."""
-    states = np.zeros((*poles.shape, drive.times.size), dtype=np.complex128)
+    states = np.zeros((*poles.shape, drive.times.size), dtype=poles.dtype)
     slopes = np.zeros_like(states)
     lengths = np.diff(drive.times)
     decay, filled, filled_slope = _advance(poles[..., None], lengths)
     forced, forced_slope = filled * drive.levels[:-1], filled_slope * drive.levels[:-1]
-    state = np.zeros(poles.shape, dtype=np.complex128)
-    slope = np.zeros(poles.shape, dtype=np.complex128)
+    # Changes first, so that each step of the recursion is one contiguous row.
+    decay, forced, forced_slope = (np.moveaxis(one, -1, 0) for one in (decay, forced, forced_slope))
+    state = np.zeros(poles.shape, dtype=poles.dtype)
+    slope = np.zeros(poles.shape, dtype=poles.dtype)
     for k in range(lengths.size):
-        slope = decay[..., k] * (slope + lengths[k] * state) + forced_slope[..., k]
-        state = decay[..., k] * state + forced[..., k]
+        slope = decay[k] * (slope + lengths[k] * state) + forced_slope[k]
+        state = decay[k] * state + forced[k]
         states[..., k + 1], slopes[..., k + 1] = state, slope
     return states, slopes
 
 
-def _advance(pole: ComplexArray, length: FloatArray) -> tuple[ComplexArray, ComplexArray, ComplexArray]:
+def _advance(pole: AnyArray, length: FloatArray) -> tuple[AnyArray, AnyArray, AnyArray]:
     """``exp(p h)``, ``(exp(p h) - 1)/p`` and the derivative of the latter by p."""
     exponent = pole * length
-    exponent = np.where(exponent.real < UNDERFLOW, UNDERFLOW, exponent)
-    decay = np.exp(exponent)
-    small = np.abs(exponent) < 1e-3
-    # Below a thousandth the difference loses digits; four terms of the series are exact there.
-    series = length * (1.0 + exponent / 2.0 * (1.0 + exponent / 3.0 * (1.0 + exponent / 4.0)))
-    slope_series = length**2 * (0.5 + exponent / 3.0 * (1.0 + exponent * 0.375 * (1.0 + exponent * 4.0 / 15.0)))
-    filled = np.where(small, series, (decay - 1.0) / pole)
-    slope = np.where(small, slope_series, (length * decay - filled) / pole)
+    decay = np.exp(
+        np.maximum(exponent.real, UNDERFLOW) + 1j * exponent.imag if exponent.dtype.kind == "c" else exponent
+    )
+    filled = (decay - 1.0) / pole
+    slope = (length * decay - filled) / pole
+    small = np.abs(exponent) < SMALL
+    if np.any(small):
+        # Below a thousandth the differences lose digits; four terms of the series are exact there.
+        x = exponent[small]
+        h = np.broadcast_to(length, exponent.shape)[small]
+        filled[small] = h * (1.0 + x / 2.0 * (1.0 + x / 3.0 * (1.0 + x / 4.0)))
+        slope[small] = h**2 * (0.5 + x / 3.0 * (1.0 + x * 0.375 * (1.0 + x * 4.0 / 15.0)))
     return decay, filled, slope

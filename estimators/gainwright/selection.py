@@ -9,7 +9,6 @@ load; it must also be of a size that matters, since a structure's own misfit is 
 from __future__ import annotations
 
 import math
-from collections.abc import Iterable
 from dataclasses import dataclass, replace
 
 import numpy as np
@@ -19,15 +18,21 @@ from gainwright.columns import Upsets, answers_of
 from gainwright.cycles import Cycles
 from gainwright.fitting import EXACT, TINY, Fit, Problem, best_starts, fit
 from gainwright.modes import UNDERFLOW, Drive
+from gainwright.noise import inflation_of
 from gainwright.record import Record
-from gainwright.structures import FAMILY, Shape
+from gainwright.structures import FAMILY
 
 FloatArray = npt.NDArray[np.float64]
+
+WITH_ZERO = next(shape for shape in FAMILY if shape.zero)
 
 MOST_UPSETS = 3
 MOST_COLOURS = 2
 SAME_COLOUR = 0.05
 MOST_MISSING = 4
+ROUGH_STEPS = 7
+IN_QUESTION = 60.0
+"""Structures further than this from the best criterion, in units of its own colour, are not looked at again."""
 LEAST_SAMPLES = 20
 """Fewer samples than this are hardly more than the numbers to be fitted."""
 MOSTLY_MISFIT = 0.5
@@ -76,25 +81,100 @@ def explain(record: Record, cycles: Cycles) -> Explanation:
     -------
     Explanation
     """
-    swing = float(np.mean(cycles.swings))
     problem = _problem(record, cycles)
-    fits = _fits(problem, FAMILY) if problem.time.size >= LEAST_SAMPLES else []
-    if not fits:
+    if problem.time.size < LEAST_SAMPLES:
         return Explanation([], 0.0)
-    doubtful = _doubtful_changes(record)
-    if doubtful:
-        fits = _refitted(_sharpened(fits[0], doubtful), fits)
-    fits = _disturbed(fits, cycles, swing)
-    if doubtful:
-        fits = _refitted(_sharpened(fits[0], doubtful), fits)
-    for _ in range(MOST_COLOURS):
-        share = _misfit_share(fits[0], record, cycles)
-        correlation = 0.0 if share > MOSTLY_MISFIT else fits[0].correlation
-        if abs(correlation - fits[0].problem.correlation) < SAME_COLOUR:
-            break
-        fits = _disturbed(_refitted(fits[0].problem.in_colour(correlation), fits), cycles, swing)
+    rough = _first_looks(problem)
+    if not rough:
+        return Explanation([], 0.0)
+    story = _Story(record, cycles)
+    lead = story.told(_again(problem, rough[0]))
+    rivals = {one.shape.name: one for one in rough}
+    looks = [fit(problem, WITH_ZERO, start, ROUGH_STEPS) for start in _zero_starts(problem, rivals.get("third"))]
+    zero = _best(looks)
+    if zero is not None:
+        zero = _again(problem, zero)
+        rivals[zero.shape.name] = zero
+        if zero.own_colour_criterion < lead.own_colour_criterion:
+            lead = min(lead, story.told(zero), key=lambda one: one.own_colour_criterion)
+    fits = _all_beside(lead, list(rivals.values()))
     share = _misfit_share(fits[0], record, cycles)
     return Explanation(fits, math.sqrt(share * float(np.mean(fits[0].residual ** 2))))
+
+
+class _Story:
+    """How one structure's fit grows into a full account of a record: doubtful changes, disturbances, colour."""
+
+    def __init__(self, record: Record, cycles: Cycles) -> None:
+        self._record = record
+        self._cycles = cycles
+        self._swing = float(np.mean(cycles.swings))
+        self._doubtful = _doubtful_changes(record)
+
+    def told(self, lead: Fit) -> Fit:
+        """The fit beside everything that the record calls for."""
+        lead = self._disturbed(self._sharpened(lead))
+        lead = self._sharpened(lead)
+        for _ in range(MOST_COLOURS):
+            share = _misfit_share(lead, self._record, self._cycles)
+            correlation = 0.0 if share > MOSTLY_MISFIT else lead.correlation
+            if abs(correlation - lead.problem.correlation) < SAME_COLOUR:
+                break
+            lead = self._disturbed(_again(lead.problem.in_colour(correlation), lead))
+        return lead
+
+    def _sharpened(self, lead: Fit) -> Fit:
+        if not self._doubtful:
+            return lead
+        problem = _sharpened(lead, self._doubtful)
+        return lead if problem is lead.problem else _again(problem, lead)
+
+    def _disturbed(self, lead: Fit) -> Fit:
+        """The fit beside the disturbances that its residual calls for, one after the other, the best first."""
+        for _ in range(MOST_UPSETS):
+            upsets = _called_for(lead, self._cycles, self._swing)
+            better = _best(
+                [fit(lead.problem.with_upsets(one), lead.shape, lead.parameters) for one in upsets], own=True
+            )
+            if better is None or better.own_colour_criterion >= lead.own_colour_criterion:
+                break
+            lead = better
+        return lead
+
+
+def _best(tried: list[Fit | None], *, own: bool = False) -> Fit | None:
+    """The fit of the least criterion, in its own colour where problems differ."""
+    found = [one for one in tried if one is not None]
+    return min(found, key=lambda one: one.own_colour_criterion if own else one.criterion) if found else None
+
+
+def _again(problem: Problem, before: Fit) -> Fit:
+    """A fit for another problem, from where it stands; as it was where that fails."""
+    return fit(problem, before.shape, before.parameters) or before
+
+
+def _first_looks(problem: Problem) -> list[Fit]:
+    """Each structure without a zero, roughly, from the best start of its grid; best first."""
+    looks = [fit(problem, shape, best_starts(problem, shape)[0], ROUGH_STEPS) for shape in FAMILY if not shape.zero]
+    return sorted((one for one in looks if one is not None), key=lambda one: one.criterion)
+
+
+def _all_beside(lead: Fit, rivals: list[Fit]) -> list[Fit]:
+    """Every structure still in question, in the lead's account of the record; best first."""
+    problem = lead.problem
+    own = {one.shape.name: one for one in rivals} | {lead.shape.name: lead}
+    least = min(one.criterion for one in rivals)
+    limit = least + IN_QUESTION * max(1.0, *(inflation_of(one.white) for one in rivals if one.criterion == least))
+    found = {lead.shape.name: lead}
+    for one in own.values():
+        if one.shape.name in found or one.criterion > limit:
+            continue
+        start = one.parameters[: one.shape.parameters]
+        starts = [start, *(_beside(found["third"]) if one.shape.zero and "third" in found else [])]
+        again = _best([fit(problem, one.shape, s) for s in starts])
+        if again is not None:
+            found[one.shape.name] = again
+    return sorted(found.values(), key=lambda one: one.criterion)
 
 
 def _misfit_share(best: Fit, record: Record, cycles: Cycles) -> float:
@@ -111,27 +191,6 @@ def _misfit_share(best: Fit, record: Record, cycles: Cycles) -> float:
     return max(0.0, 1.0 - float(np.mean((residual[inside] - before) ** 2)) / 2 / power) if power > 0 else 0.0
 
 
-def _disturbed(fits: list[Fit], cycles: Cycles, swing: float) -> list[Fit]:
-    """The fits beside the disturbances that the best one without a zero calls for, where those explain more."""
-    plain = [one for one in fits if not one.shape.zero]
-    if not plain:
-        return fits
-    best = plain[0]
-    for _ in range(MOST_UPSETS):
-        tried = [
-            fit(best.problem.with_upsets(upsets), best.shape, best.parameters)
-            for upsets in _called_for(best, cycles, swing)
-        ]
-        better = [one for one in tried if one is not None and one.own_colour_criterion < best.own_colour_criterion]
-        if not better:
-            break
-        best = min(better, key=lambda one: one.own_colour_criterion)
-    if best.problem.upsets == plain[0].problem.upsets:
-        return fits
-    again = _refitted(best.problem, fits)
-    return again if again and again[0].own_colour_criterion < fits[0].own_colour_criterion else fits
-
-
 def _problem(record: Record, cycles: Cycles) -> Problem:
     problem = Problem.of(record, cycles.period)
     baseline = float(record.time[cycles.switches[0]] - record.time[0])
@@ -141,30 +200,9 @@ def _problem(record: Record, cycles: Cycles) -> Problem:
     return problem.with_upsets(Upsets(from_rest=False)).later_than(float(record.time[0]) + 0.5 * cycles.period)
 
 
-def _fits(problem: Problem, shapes: Iterable[Shape]) -> list[Fit]:
-    """Each structure from the best starts of its grid; one with a zero from the same structure without it as well."""
-    found: dict[str, Fit] = {}
-    for shape in shapes:
-        starts = best_starts(problem, shape)
-        if shape.zero and "third" in found:
-            starts = [starts[0], *_beside(found["third"])]
-        tried = [one for one in (fit(problem, shape, start) for start in starts) if one is not None]
-        if tried:
-            found[shape.name] = min(tried, key=lambda one: one.criterion)
-    return sorted(found.values(), key=lambda one: one.criterion)
-
-
-def _refitted(problem: Problem, fits: list[Fit]) -> list[Fit]:
-    """The fits again for another problem, from where they stand."""
-    found: dict[str, Fit] = {}
-    for one in sorted(fits, key=lambda one: one.shape.zero):
-        starts = [one.parameters[: one.shape.parameters]]
-        if one.shape.zero and "third" in found:
-            starts.extend(_beside(found["third"]))
-        tried = [again for again in (fit(problem, one.shape, start) for start in starts) if again is not None]
-        if tried:
-            found[one.shape.name] = min(tried, key=lambda again: again.criterion)
-    return sorted(found.values(), key=lambda again: again.criterion)
+def _zero_starts(problem: Problem, third: Fit | None) -> list[FloatArray]:
+    grid = best_starts(problem, WITH_ZERO)
+    return [grid[0], *_beside(third)] if third is not None else grid
 
 
 def _beside(third: Fit) -> list[FloatArray]:
