@@ -94,6 +94,7 @@ async def run(
     act: Act | None = None,
     adapter: Any = None,
     log: KeptLog | None = None,
+    permitted: Callable[[], bool] = lambda: True,
     **plan: Any,
 ) -> tuple[Ended, Bench]:
     """Run an experiment to its end while ``act`` happens beside it."""
@@ -101,7 +102,8 @@ async def run(
     simulated = SimulatedAdapter(device, clock)
     bench = Bench(clock, simulated, log or KeptLog(), Signals())
     chosen = replace(PLAN, effect=device.effect, **plan)
-    drive = Drive(adapter(simulated) if adapter else simulated, new_guard(chosen, clock.monotonic_s()), clock)
+    device_side = adapter(simulated) if adapter else simulated
+    drive = Drive(device_side, new_guard(chosen, clock.monotonic_s()), clock, permitted=permitted)
     running = asyncio.ensure_future(
         run_experiment(plan=chosen, drive=drive, log=bench.log, signals=bench.signals, clock=clock)
     )

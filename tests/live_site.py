@@ -119,7 +119,7 @@ class Service:
         return httpx.Client(base_url=self.url, headers={"Authorization": f"Bearer {self.token}"}, timeout=10)
 
     def children(self, module: str) -> list[int]:
-        """Process ids of one of the service's modules, e.g. ``gainwright_service.worker``."""
+        """Process ids of one of the service's modules, e.g. ``gainwright_service.worker_process``."""
         return sorted(pid for pid, line in processes_of(self.marker).items() if f"-m {module}" in line)
 
     def kill(self, module: str) -> int:

@@ -6,11 +6,12 @@ what the link adds: the time between a reading and the write that answers it.
 
 from __future__ import annotations
 
+from collections.abc import Callable
 from dataclasses import dataclass
 
 from gainwright_service.adapters.port import LoopAdapter
 from gainwright_service.clock import Clock
-from gainwright_service.errors import AdapterError
+from gainwright_service.errors import AdapterError, WriteWithheld
 from gainwright_service.experiment.commands import Facts
 from gainwright_service.experiment.events import Trip
 from gainwright_service.experiment.guard import Guard
@@ -34,12 +35,18 @@ class Drive:
     adapter : LoopAdapter
     guard : Guard
     clock : Clock
+    permitted : callable
+        Whether anything may be written at all; asked before each write, the exit's included. False once the site's
+        lock is too old to trust: another worker may be at the device.
     """
 
-    def __init__(self, adapter: LoopAdapter, guard: Guard, clock: Clock) -> None:
+    def __init__(
+        self, adapter: LoopAdapter, guard: Guard, clock: Clock, *, permitted: Callable[[], bool] = lambda: True
+    ) -> None:
         self._adapter = adapter
         self._guard = guard
         self._clock = clock
+        self._permitted = permitted
         self._newest_taken_at: float | None = None
         self._latencies_s = 0.0
         self._writes = 0
@@ -66,6 +73,7 @@ class Drive:
 
     async def take_over(self, facts: Facts) -> None:
         """Put the loop into manual and arm guard and watchdog. Raises `AdapterError`."""
+        self._check_permission()
         if facts.mode is not Mode.MANUAL:
             await self._adapter.take_over()
         self._resting_output = facts.resting_output
@@ -94,11 +102,13 @@ class Drive:
 
     async def hand_back(self, mode: Mode) -> None:
         """Ask for the mode as found. Raises `AdapterError`."""
+        self._check_permission()
         self._guard = self._guard.released(mode)
         await self._adapter.hand_back(mode, urgent=True)
 
     async def beat(self) -> None:
         """Beat the device's watchdog. Raises `AdapterError`."""
+        self._check_permission()
         await self._adapter.heartbeat(armed=True, resting_output=self._resting_output)
         self._beaten_at = self._clock.monotonic_s()
 
@@ -109,6 +119,7 @@ class Drive:
     async def disarm(self) -> bool:
         """Disarm the device's watchdog; whether the device took it. Moves no output."""
         try:
+            self._check_permission()
             await self._adapter.heartbeat(armed=False)
         except AdapterError:
             return False
@@ -123,6 +134,7 @@ class Drive:
         self._guard = self._guard.returning()
 
     async def _write(self, output: float, *, urgent: bool) -> None:
+        self._check_permission()
         started = self._clock.monotonic_s()
         self.commanded = output
         # Before the exchange too: a write that fails may have been taken, and its echo is nobody else's doing.
@@ -134,3 +146,7 @@ class Drive:
         if not urgent and self._newest_taken_at is not None:
             self._latencies_s += max((started + ended) / 2 - self._newest_taken_at, 0.0)
             self._writes += 1
+
+    def _check_permission(self) -> None:
+        if not self._permitted():
+            raise WriteWithheld("the site's lock was not confirmed for too long: another worker may hold the loop")

@@ -11,6 +11,7 @@ ServiceError
 |   +-- DeviceRefused                the device answered with an error
 |   +-- DeviceTimedOut               no answer in time
 |   +-- DeviceNonsensical            an answer that cannot be true
+|   +-- WriteWithheld                not sent: the site's lock is too old to trust
 +-- StoreError                       us: the store cannot be used now
 |   +-- StoreUnavailable
 |   +-- LockLost
@@ -160,6 +161,10 @@ class DeviceNonsensical(AdapterError):
     """The device gave a value that cannot be true."""
 
     code = ProblemCode.DEVICE_NONSENSICAL
+
+
+class WriteWithheld(AdapterError):
+    """A write that was not sent, since another worker may be at the device."""
 
 
 class StoreError(ServiceError):

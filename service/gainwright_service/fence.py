@@ -17,6 +17,32 @@ from sqlalchemy.ext.asyncio import AsyncConnection, AsyncEngine
 
 from gainwright_service.errors import StoreError
 
+PATIENCE_S = 5.0
+"""A lock that cannot be confirmed for this long is lost."""
+
+
+def silent_from(last: tuple[str, float, bool] | None, *, longest_exit_s: float, ended_worker: str) -> float:
+    """The instant from which the last holder of a database's lock writes nothing more, seconds since the epoch.
+
+    The lock is freed by a broken connection while its holder may live on and take its experiments through the exit
+    path; each of its writes checks how long ago the lock was confirmed.
+
+    Parameters
+    ----------
+    last : tuple or None
+        The holder's name, when it was confirmed, whether it let go in good order.
+    longest_exit_s : float, seconds
+        The longest exit of the tasks it left running.
+    ended_worker : str
+        Host and process of a worker that was waited for, so that it cannot act; empty where none is known.
+    """
+    if last is None:
+        return 0.0
+    name, confirmed_at, released = last
+    if released or (ended_worker and name.rpartition("-")[0] == ended_worker):
+        return 0.0
+    return confirmed_at + PATIENCE_S + longest_exit_s
+
 
 class Fence(Protocol):
     """One site's lock."""

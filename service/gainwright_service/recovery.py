@@ -7,6 +7,7 @@ command is young enough. Otherwise nothing is written. Driving is never resumed.
 
 from __future__ import annotations
 
+from collections.abc import Callable
 from dataclasses import dataclass
 from typing import Any
 
@@ -38,6 +39,7 @@ async def recover(
     last_command_age_s: float,
     adapter: LoopAdapter,
     clock: Clock,
+    permitted: Callable[[], bool] = lambda: True,
 ) -> Recovered:
     """Give back, if it is still ours, the output of a test that died.
 
@@ -51,6 +53,8 @@ async def recover(
         Age of the last command, wall clock, seconds.
     adapter : LoopAdapter
     clock : Clock
+    permitted : callable
+        As of `Drive`.
     """
     owned = Ownership.from_document(ownership)
     plan, facts = owned.plan, owned.facts
@@ -72,7 +76,7 @@ async def recover(
         restore=facts.mode in (Mode.AUTOMATIC, Mode.CASCADE) and plan.exit_action == "as_found",
         read_first=True,
     )
-    drive = Drive(adapter, new_guard(plan, now), clock)
+    drive = Drive(adapter, new_guard(plan, now), clock, permitted=permitted)
     ending: Ending | None = None
     while ending is None:
         ending = await _one_step(way_out, drive, clock)

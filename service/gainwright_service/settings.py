@@ -21,6 +21,7 @@ class Settings(BaseSettings):
     site: str = "local"
     first_person: str = ""
     beat_fd: int = -1
+    ended_worker: str = ""
     log_level: str = "INFO"
 
     @property

@@ -20,7 +20,8 @@ BEAT_S = 1.0
 MISSED_BEATS = 3
 FIRST_BEAT_S = 20.0
 """A new process has this long to import and to beat for the first time."""
-EXIT_PATH_S = 45.0
+EXIT_PATH_S = 900.0
+"""The longest that an ending child is waited for while it beats: above any exit path, return included."""
 LONGEST_BACKOFF_S = 5.0
 
 
@@ -33,6 +34,8 @@ class Child:
     name : str
     command : sequence of str
     environment : mapping
+    ended : str
+        Process identifier of the one before, which has been waited for; empty at first.
     """
 
     name: str
@@ -45,12 +48,13 @@ class Child:
     start_after: float = 0.0
     backoff_s: float = 0.0
     restarts: int = field(default=0)
+    ended: str = ""
 
     def start(self, now: float) -> None:
         """Start the process with a pipe for its beats."""
         reader, writer = os.pipe()
         os.set_blocking(reader, False)
-        environment = {**self.environment, "GAINWRIGHT_BEAT_FD": str(writer)}
+        environment = {**self.environment, "GAINWRIGHT_BEAT_FD": str(writer), "GAINWRIGHT_ENDED_WORKER": self.ended}
         self.process = subprocess.Popen(
             list(self.command), env=environment, pass_fds=(writer,), start_new_session=True, stdin=subprocess.DEVNULL
         )
@@ -82,6 +86,8 @@ class Child:
         if self.process.poll() is None:
             self.process.kill()
         self.process.wait()
+        # Waited for: whoever follows need not fear that it still acts.
+        self.ended = str(self.process.pid)
         self.process = None
         os.close(self.beats)
         self.beats = -1
@@ -151,18 +157,21 @@ class Supervisor:
                 child.process.terminate()
         deadline = time.monotonic() + self._exit_path_s
         for child in self.children:
-            if child.process is not None:
-                try:
-                    child.process.wait(max(0.1, deadline - time.monotonic()))
-                except subprocess.TimeoutExpired:
+            while child.process is not None and child.process.poll() is None:
+                now = time.monotonic()
+                child.listen(now, self._beat_s)
+                # One that still beats is on its way out, with outputs in its hands; a silent one does nothing more.
+                if child.silent(now, self._beat_s) or now > deadline:
                     _say(f"{child.name} did not end in time and is killed")
+                    break
+                self._wait()
             child.kill()
 
 
 def serve(environment: Mapping[str, str], *, site: str) -> int:
     """Run the service: the API and the site's worker, until SIGTERM or Ctrl-C."""
     python = [sys.executable, "-m"]
-    worker = Child("worker", [*python, "gainwright_service.worker", "--site", site], environment)
+    worker = Child("worker", [*python, "gainwright_service.worker_process", "--site", site], environment)
     api = Child("api", [*python, "gainwright_service.api"], environment)
     return Supervisor([worker, api]).run()
 

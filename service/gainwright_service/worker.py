@@ -6,13 +6,8 @@ of one event loop. Knows no web framework. Analyses go to processes of their own
 
 from __future__ import annotations
 
-import argparse
 import asyncio
-import gc
-import os
-import signal
-import socket
-import uuid
+from collections.abc import Callable
 from dataclasses import replace
 from typing import Any
 
@@ -21,29 +16,25 @@ from sqlalchemy.ext.asyncio import AsyncEngine
 from gainwright_service.adapters.build import open_adapter
 from gainwright_service.adapters.links import Links
 from gainwright_service.analysis_pool import AnalysisPool
-from gainwright_service.beating import beat
-from gainwright_service.clock import Clock, SystemClock
+from gainwright_service.clock import Clock
 from gainwright_service.drive import Drive
 from gainwright_service.errors import LockLost, ServiceError, StoreError
 from gainwright_service.experiment.guard import new_guard
-from gainwright_service.fence import Fence, fence_of
+from gainwright_service.experiment.ownership import Ownership
+from gainwright_service.fence import PATIENCE_S, Fence, silent_from
 from gainwright_service.gains_found import gains_found
-from gainwright_service.logs import set_up
 from gainwright_service.planning import plan_experiment
 from gainwright_service.proposals import conclude_experiment
 from gainwright_service.recovery import recover
 from gainwright_service.runner import Ended, Signals, run_experiment
-from gainwright_service.settings import Settings
 from gainwright_service.store import samples, sign_offs, sites, tasks, work
-from gainwright_service.store.connect import migrate, open_engine, writing
+from gainwright_service.store.connect import writing
 from gainwright_service.writer import Writer
 from gainwright_wire.loops import Loop
 from gainwright_wire.tasks import StartExperiment
 
 POLL_S = 0.25
 FENCE_S = 1.0
-PATIENCE_S = 5.0
-"""A lock that cannot be confirmed for this long is lost."""
 
 
 class Worker:
@@ -58,11 +49,22 @@ class Worker:
     site : str
     name : str
         Unique to this process.
+    ended_worker : str
+        Host and process of a worker that is known to have ended; empty where none is.
     log : structlog logger
     """
 
     def __init__(
-        self, engine: AsyncEngine, fence: Fence, clock: Clock, pool: AnalysisPool, *, site: str, name: str, log: Any
+        self,
+        engine: AsyncEngine,
+        fence: Fence,
+        clock: Clock,
+        pool: AnalysisPool,
+        *,
+        site: str,
+        name: str,
+        log: Any,
+        ended_worker: str = "",
     ) -> None:
         self._engine = engine
         self._fence = fence
@@ -70,6 +72,7 @@ class Worker:
         self._pool = pool
         self._site = site
         self._name = name
+        self._ended_worker = ended_worker
         self._log = log
         self._links = Links()
         self._writer = Writer(engine, clock, site=site, worker=name, on_lost=self._lost)
@@ -77,6 +80,7 @@ class Worker:
         self._stopped: set[str] = set()
         self._ending = asyncio.Event()
         self._lost_lock = False
+        self._confirmed_at = clock.monotonic_s()
 
     def end(self) -> None:
         """Begin the end: every experiment takes its exit path."""
@@ -109,17 +113,29 @@ class Worker:
             if self._ending.is_set():
                 return False
             await self._clock.sleep_until(self._clock.monotonic_s() + FENCE_S, self._ending)
-        async with self._engine.connect() as connection:
-            last = await sites.last_holder(connection, self._site)
-        if last is not None and not last[2] and self._engine.dialect.name != "sqlite":
-            # A database lock can be freed by a broken connection while its holder lives; a file lock cannot.
-            left = PATIENCE_S - (self._clock.wall_time().timestamp() - last[1])
-            if left > 0:
-                await self._clock.sleep_until(self._clock.monotonic_s() + left, self._ending)
+        await self._wait_out_the_last_holder()
+        self._confirmed_at = self._clock.monotonic_s()
         async with writing(self._engine) as connection:
             await sites.confirm(connection, self._site, self._name, self._clock.wall_time().timestamp())
         self._log.info("site taken", site=self._site, worker=self._name)
         return True
+
+    async def _wait_out_the_last_holder(self) -> None:
+        """Until a worker that may live on without its lock writes nothing any more (design, section 7)."""
+        if self._engine.dialect.name == "sqlite":
+            return
+        async with self._engine.connect() as connection:
+            last = await sites.last_holder(connection, self._site)
+            left_driven = await work.left_running(connection, self._site)
+        longest = max((_longest_exit_s(row["ownership"]) for row in left_driven), default=0.0)
+        over_at = silent_from(last, longest_exit_s=longest, ended_worker=self._ended_worker)
+        while (left := over_at - self._clock.wall_time().timestamp()) > 0 and not self._ending.is_set():
+            self._log.info("waiting out the last holder", site=self._site, seconds=round(left, 1))
+            await self._clock.sleep_until(self._clock.monotonic_s() + left, self._ending)
+
+    def _permission(self, longest_exit_s: float) -> Callable[[], bool]:
+        """Whether the last confirmation of the site's lock still covers a way out of this length."""
+        return lambda: self._clock.monotonic_s() - self._confirmed_at <= PATIENCE_S + longest_exit_s
 
     async def _let_go(self) -> None:
         try:
@@ -132,12 +148,11 @@ class Worker:
 
     async def _keep_fence(self) -> None:
         """Confirm the lock each second; beyond patience every experiment takes its exit path."""
-        confirmed_at = self._clock.monotonic_s()
         while True:
             await self._clock.sleep_until(self._clock.monotonic_s() + FENCE_S)
             if await self._fence.held():
-                confirmed_at = self._clock.monotonic_s()
-            elif self._clock.monotonic_s() - confirmed_at > PATIENCE_S:
+                self._confirmed_at = self._clock.monotonic_s()
+            elif self._clock.monotonic_s() - self._confirmed_at > PATIENCE_S:
                 self._log.error("the site's lock is lost", site=self._site)
                 self._lost_lock = True
                 self._lost()
@@ -193,7 +208,8 @@ class Worker:
         log = self._writer.log_of(row["id"])
         log.notes["plan"] = plan.document()
         gains = await gains_found(adapter)
-        drive = Drive(adapter, new_guard(plan, self._clock.monotonic_s()), self._clock)
+        permitted = self._permission(plan.longest_exit_s)
+        drive = Drive(adapter, new_guard(plan, self._clock.monotonic_s()), self._clock, permitted=permitted)
         ended = await run_experiment(plan=plan, drive=drive, log=log, signals=signals, clock=self._clock)
         if ended.as_found is not None:
             ended = replace(ended, as_found={**ended.as_found, "gains": gains})
@@ -292,6 +308,7 @@ class Worker:
                 last_command_age_s=age_s,
                 adapter=open_adapter(loop, self._links, self._clock),
                 clock=self._clock,
+                permitted=self._permission(_longest_exit_s(row["ownership"])),
             )
             outcome, exit, detail = found.outcome.value, found.exit.value, found.exit_detail
         self._log.info("experiment recovered", task=row["id"], exit=exit, detail=detail)
@@ -324,47 +341,5 @@ class Worker:
         return self._clock.wall_time().isoformat(timespec="milliseconds")
 
 
-async def serve_site(settings: Settings, site: str) -> None:
-    """Run a site's worker in this process until SIGTERM, Ctrl-C or the loss of the parent."""
-    clock = SystemClock()
-    log = set_up("worker", settings.log_level)
-    settings.data_dir.mkdir(parents=True, exist_ok=True)
-    engine = open_engine(settings.database)
-    pool = AnalysisPool()
-    name = f"{socket.gethostname()[:24]}-{os.getpid()}-{uuid.uuid4().hex[:8]}"
-    parent_lost = asyncio.Event()
-    beating = asyncio.create_task(beat(settings.beat_fd, clock, parent_lost), name="beat")
-    try:
-        await migrate(engine)
-        worker = Worker(engine, fence_of(engine, settings.data_dir, site), clock, pool, site=site, name=name, log=log)
-        event_loop = asyncio.get_running_loop()
-        for number in (signal.SIGTERM, signal.SIGINT):
-            event_loop.add_signal_handler(number, worker.end)
-        watching = asyncio.create_task(_end_with_parent(parent_lost, worker), name="parent")
-        gc.collect()
-        gc.freeze()
-        gc.set_threshold(50_000, 50, 50)
-        await worker.run()
-        watching.cancel()
-    finally:
-        beating.cancel()
-        pool.close()
-        await engine.dispose()
-
-
-async def _end_with_parent(parent_lost: asyncio.Event, worker: Worker) -> None:
-    await parent_lost.wait()
-    worker.end()
-
-
-def main(argv: list[str] | None = None) -> int:
-    """The worker as a process; its exit status."""
-    parser = argparse.ArgumentParser(prog="gainwright worker", description="Serves one site's devices.")
-    parser.add_argument("--site", default="local")
-    options = parser.parse_args(argv)
-    asyncio.run(serve_site(Settings(), options.site))
-    return 0
-
-
-if __name__ == "__main__":
-    raise SystemExit(main())
+def _longest_exit_s(ownership: dict[str, Any] | None) -> float:
+    return Ownership.from_document(ownership).plan.longest_exit_s if ownership else 0.0

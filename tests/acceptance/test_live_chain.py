@@ -11,6 +11,7 @@ from collections.abc import Iterator
 from pathlib import Path
 from typing import Any
 
+import httpx
 import pytest
 
 from gainwright_client.client import Client
@@ -84,6 +85,48 @@ def test_the_demo_tunes_a_loop_keeps_the_record_and_leaves_nothing_running(tmp_p
     assert processes_of(marker) == {}
 
 
+def test_loops_are_added_listed_shown_and_replaced_by_the_command(site: Service, rig: Rig, tmp_path: Path) -> None:
+    definition = {**rig.loop("LIC-310")["definition"], "tag": "LIC-311", "description": "added by hand"}
+    (tmp_path / "loop.json").write_text(json.dumps(definition))
+    added = _run(site, *GAINWRIGHT, "loop", "add", "loop.json", "--json", folder=tmp_path)
+    assert added.returncode == ExitCode.DONE, added.stderr
+    assert json.loads(added.stdout)[0]["version"] == 1
+    again = _run(site, *GAINWRIGHT, "loop", "add", "loop.json", folder=tmp_path)
+    assert again.returncode == ExitCode.REFUSED
+    assert "LIC-311" in again.stderr
+    replaced = _run(site, *GAINWRIGHT, "loop", "add", "loop.json", "--replace", folder=tmp_path)
+    assert "version 2" in replaced.stdout, replaced.stderr
+    listed = _run(site, *GAINWRIGHT, "loop", "list", folder=tmp_path)
+    assert "LIC-311" in listed.stdout
+    shown = _run(site, *GAINWRIGHT, "loop", "show", "LIC-311", "--json", folder=tmp_path)
+    assert json.loads(shown.stdout)["loop"]["description"] == "added by hand"
+    unknown = _run(site, *GAINWRIGHT, "loop", "show", "XXX-999", folder=tmp_path)
+    assert unknown.returncode == ExitCode.REFUSED
+
+
+def test_the_dashboard_page_relays_the_stream_without_the_token(site: Service, tmp_path: Path) -> None:
+    with Client(site.url, site.token) as client:
+        started = client.start_experiment("LIC-310", START)
+        command = [sys.executable, str(EXAMPLES / "lab_dashboard.py"), "LIC-310", "--page", "0"]
+        serving = subprocess.Popen(command, env=_environment(site), stdout=subprocess.PIPE, text=True)
+        assert serving.stdout is not None
+        try:
+            address = serving.stdout.readline().strip()
+            page = httpx.get(address, timeout=5)
+            assert "LIC-310" in page.text
+            assert site.token not in page.text
+            wait_for("the test listens", lambda: client.experiment(started.id).progress.samples > 5, 30)
+            client.stop_experiment(started.id)
+            with httpx.stream("GET", f"{address}/stream", timeout=30) as stream:
+                told = [line.removeprefix("event: ") for line in stream.iter_lines() if line.startswith("event: ")]
+        finally:
+            serving.send_signal(signal.SIGINT)
+            serving.wait(10)
+            serving.stdout.close()
+    assert "sample" in told
+    assert told[-1] == "end"
+
+
 def test_the_first_interrupt_of_tune_stops_the_test_and_waits_for_the_exit(
     site: Service, rig: Rig, tmp_path: Path
 ) -> None:
@@ -118,7 +161,7 @@ def test_the_bench_example_tests_a_loop_and_prints_its_gains(site: Service, rig:
 
 
 def test_the_dashboard_example_tells_a_test_from_its_first_sample_to_its_end(site: Service, tmp_path: Path) -> None:
-    none = _run(site, sys.executable, str(EXAMPLES / "lab_dashboard.py"), "LIC-310", folder=tmp_path)
+    none = _run(site, sys.executable, str(EXAMPLES / "lab_dashboard.py"), "FIC-105", folder=tmp_path)
     assert none.returncode == 1
     with Client(site.url, site.token) as client:
         started = client.start_experiment("PIC-620", START)

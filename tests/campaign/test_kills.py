@@ -85,7 +85,7 @@ def test_a_killed_worker_is_replaced_and_the_exit_is_verified_within_five_second
     identity = start(site, rig)
     wait_for("the test swings", lambda: swinging(site, identity), 60)
     killed_at = time.time()
-    site.kill("gainwright_service.worker")
+    site.kill("gainwright_service.worker_process")
     state = wait_for("the exit is verified", lambda: finished(site, identity), 5)
     took = time.time() - killed_at
     assert (state["outcome"], state["exit"]) == ("interrupted", "verified"), state

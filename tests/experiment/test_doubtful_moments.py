@@ -149,3 +149,23 @@ async def test_a_reading_from_before_the_exit_write_proves_nothing() -> None:
     way_out.begin(before.taken_at + 1.0)
     assert way_out.settle(before.taken_at + 1.1, before) == NOTHING
     assert way_out.proofs == 0
+
+
+async def test_without_a_trusted_lock_nothing_is_written_the_exit_included() -> None:
+    made: list[Faulty] = []
+    trusted = [True]
+
+    def adapter(inner: SimulatedAdapter) -> Faulty:
+        made.append(Faulty(inner))
+        return made[0]
+
+    async def act(bench: Bench) -> None:
+        await bench.after(18.03)
+        trusted[0] = False
+        made[0].calls.clear()
+        bench.signals.store_lost()
+
+    ended, _ = await run(adapter=adapter, act=act, permitted=lambda: trusted[0])
+    assert {name for name, _ in made[0].calls} <= {"read"}
+    assert ended.outcome is Outcome.INTERRUPTED
+    assert ended.exit in (Exit.UNVERIFIED, Exit.NOT_WRITTEN)

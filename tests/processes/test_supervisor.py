@@ -8,6 +8,7 @@ import sys
 import threading
 import time
 from collections.abc import Callable
+from pathlib import Path
 
 import pytest
 
@@ -86,4 +87,30 @@ def test_a_child_that_beats_is_left_alone_and_ended_with_the_parent() -> None:
 
     child = supervised(BEATING, act)
     assert child.restarts == 0
+    assert child.process is None
+
+
+def test_a_child_on_its_way_out_is_waited_for_while_it_beats(tmp_path: Path) -> None:
+    done = tmp_path / "given back"
+    slow = f"""
+import os, signal, time
+ending = []
+signal.signal(signal.SIGTERM, lambda *_: ending.append(1))
+fd = int(os.environ["GAINWRIGHT_BEAT_FD"])
+left = 40
+while left:
+    os.write(fd, b".")
+    time.sleep(0.05)
+    left -= len(ending)
+open({str(done)!r}, "w").close()
+"""
+    supervised(slow, lambda _, child: until(lambda: child.has_beaten))
+    assert done.exists()
+
+
+def test_a_child_that_falls_silent_on_its_way_out_is_killed() -> None:
+    deaf = BEATING.replace("import os, time", "import os, signal, time\nsignal.signal(signal.SIGTERM, hang)").replace(
+        "import os", "def hang(*_):\n    while True:\n        time.sleep(1)\nimport os", 1
+    )
+    child = supervised(deaf, lambda _, child: until(lambda: child.has_beaten))
     assert child.process is None

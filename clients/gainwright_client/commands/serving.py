@@ -45,7 +45,7 @@ def worker(
 ) -> None:
     """Run one site's worker alone, as beside a shared database."""
     os.environ.update(environment_of(data_dir=data_dir, database_url=database_url))
-    from gainwright_service import worker as process
+    from gainwright_service import worker_process as process
 
     if as_json:
         _announce({"site": site}, as_json)

@@ -6,16 +6,13 @@ import json
 import os
 import sys
 from collections.abc import Awaitable, Callable
-from typing import TYPE_CHECKING, Annotated, Any, TypeVar
+from typing import Annotated, Any, TypeVar
 
 import typer
 
 from gainwright_client.commands.exit_codes import ExitCode
 from gainwright_client.commands.failing import tell
 from gainwright_client.commands.options import AsJson, DatabaseUrl, DataDir
-
-if TYPE_CHECKING:
-    from sqlalchemy.ext.asyncio import AsyncConnection
 
 Result = TypeVar("Result")
 
@@ -76,7 +73,7 @@ def _state(row: Any) -> str:
 
 
 def _in_store(
-    act: Callable[[AsyncConnection, str], Awaitable[Result]],
+    act: Callable[[Any, str], Awaitable[Result]],
     data_dir: str | None,
     database_url: str | None,
     as_json: bool,
@@ -87,11 +84,12 @@ def _in_store(
 
     from gainwright_client.commands.serving import environment_of
     from gainwright_service.errors import RequestError, ServiceError, StoreError
+    from gainwright_service.first_start import act_alone
     from gainwright_service.settings import Settings
 
     os.environ.update(environment_of(data_dir=data_dir, database_url=database_url))
     try:
-        return asyncio.run(_transacted(Settings(), act))
+        return asyncio.run(act_alone(Settings(), act))
     except StoreError as error:
         tell(ExitCode.SERVICE, error.code.value, error.detail, [], as_json=as_json)
     except RequestError as error:
@@ -99,20 +97,6 @@ def _in_store(
     except ServiceError as error:
         tell(ExitCode.SERVICE, error.code.value, error.detail, [], as_json=as_json)
     raise AssertionError("every error ends the command")
-
-
-async def _transacted(settings: Any, act: Callable[[AsyncConnection, str], Awaitable[Result]]) -> Result:
-    from gainwright_service.clock import SystemClock
-    from gainwright_service.store.connect import migrate, open_engine, writing
-
-    settings.data_dir.mkdir(parents=True, exist_ok=True)
-    engine = open_engine(settings.database)
-    try:
-        await migrate(engine)
-        async with writing(engine) as connection:
-            return await act(connection, SystemClock().wall_time().isoformat(timespec="milliseconds"))
-    finally:
-        await engine.dispose()
 
 
 def _print(document: Any, as_json: bool, text: str) -> None:

@@ -59,6 +59,11 @@ class Plan:
     return_time_s: float = 60.0
     link_patience_s: float = 30.0
 
+    @property
+    def longest_exit_s(self) -> float:
+        """The longest that a way out may take: return, a lost link's patience, both proofs with their repeats."""
+        return self.return_time_s + self.link_patience_s + 4 * self.settle_s
+
     def __post_init__(self) -> None:
         for field in fields(self):
             value = getattr(self, field.name)

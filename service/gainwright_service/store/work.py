@@ -36,6 +36,12 @@ async def claim(connection: AsyncConnection, *, site: str, worker: str, at: str)
     return None if row is None else dict(row)
 
 
+async def left_running(connection: AsyncConnection, site: str) -> list[Row]:
+    """Every running task of a site, whoever holds it."""
+    query = select(tasks).where(tasks.c.site == site, tasks.c.state == "running")
+    return [dict(row) for row in (await connection.execute(query)).mappings()]
+
+
 async def adopt(connection: AsyncConnection, *, site: str, worker: str) -> list[Row]:
     """Take over every running task of a site from a worker that is no more, for recovery only."""
     statement = (
