@@ -45,7 +45,10 @@ def contradictions(
     if places.size < 2:
         return 0.0
     starts = cycles.switches[places - 1] + shift
-    upward = value[deciding] > np.median(value[cycles.switches[first] : cycles.switches[last]])
+    # Every second switch is of one direction: that with the higher values ends a rise.
+    upward = places % 2 == 0
+    if np.mean(value[deciding[upward]]) < np.mean(value[deciding[~upward]]):
+        upward = ~upward
     broken = 0
     for side, sign in ((upward, 1.0), (~upward, -1.0)):
         decided = sign * value[deciding[side]]

@@ -51,7 +51,7 @@ BOUNDS: dict[str, tuple[Bounds, str]] = {
     "few_cycles": (Bounds(2.0, 1.0, "cycles", least=True), "Few whole cycles with equal levels: test for longer."),
     "estimates_apart": (Bounds(0.10, 0.20), "The measured response and the model disagree about the ultimate gain."),
     "columns_misaligned": (
-        Bounds(0.10, 0.25, "of the switches"),
+        Bounds(0.10, 0.25, "of all switches"),
         "The output column fits the relay's law better one sample apart: say how it was recorded.",
     ),
     "interval_wide": (Bounds(0.15, 0.5), "The ultimate gain's interval is wide: test for longer or swing further."),

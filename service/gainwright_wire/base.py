@@ -6,9 +6,11 @@ from typing import Annotated
 
 from pydantic import BaseModel, ConfigDict, Field
 
-Finite = Annotated[float, Field(allow_inf_nan=False, ge=-1e12, le=1e12)]
-Positive = Annotated[float, Field(gt=0, allow_inf_nan=False, le=1e12)]
-NonNegative = Annotated[float, Field(ge=0, allow_inf_nan=False, le=1e12)]
+Finite = Annotated[float, Field(strict=True, allow_inf_nan=False, ge=-1e12, le=1e12)]
+Positive = Annotated[float, Field(strict=True, gt=0, allow_inf_nan=False, le=1e12)]
+NonNegative = Annotated[float, Field(strict=True, ge=0, allow_inf_nan=False, le=1e12)]
+Flag = Annotated[bool, Field(strict=True)]
+"""True or false, never a word that might mean either: what is declared here can hurt somebody."""
 Tag = Annotated[str, Field(pattern=r"^[A-Za-z0-9][A-Za-z0-9._-]{0,63}$", examples=["TIC-201"])]
 Site = Annotated[str, Field(pattern=r"^[a-z0-9][a-z0-9-]{0,31}$", examples=["local"])]
 _NO_NUL = r"^[^\x00]*$"

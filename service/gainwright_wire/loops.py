@@ -8,7 +8,7 @@ from typing import Annotated, Literal
 from pydantic import Field, model_validator
 from pydantic_core import PydanticCustomError
 
-from gainwright_wire.base import Finite, LongText, NonNegative, Positive, ShortText, Site, Tag, Wire
+from gainwright_wire.base import Finite, Flag, LongText, NonNegative, Positive, ShortText, Site, Tag, Wire
 
 Seconds = Annotated[float, Field(gt=0, le=86400, allow_inf_nan=False)]
 
@@ -235,7 +235,7 @@ class Loop(Wire):
     description: ShortText = ""
     site: Site = "local"
     loop_class: Annotated[LoopClass, Field(alias="class")] = LoopClass.PLANT
-    safety_function: bool = False
+    safety_function: Flag = False
     adapter: Adapter
     process_variable: Range
     controller_output: Range
@@ -243,9 +243,9 @@ class Loop(Wire):
     sample_interval_s: Annotated[float, Field(ge=0.01, le=60, allow_inf_nan=False)] = 0.1
     limits: Limits
     exit_action: ExitAction
-    integral_follows_in_manual: bool | None = None
-    setpoint_follows_in_manual: bool | None = None
-    attended_integrating_hold: bool = False
+    integral_follows_in_manual: Flag | None = None
+    setpoint_follows_in_manual: Flag | None = None
+    attended_integrating_hold: Flag = False
     interaction_groups: Annotated[tuple[ShortText, ...], Field(max_length=20)] = ()
     witnesses: Annotated[tuple[Witness, ...], Field(max_length=20)] = ()
     controller: Controller | None = None

@@ -8,7 +8,7 @@ from typing import Annotated, Any, Literal
 from pydantic import Field
 
 from gainwright_wire.analyses import AnalysisReply, Checklist, Finding, Grade, Model, Proposal, RefusedRule
-from gainwright_wire.base import Finite, Interval, LongText, NonNegative, Positive, ShortText, Wire
+from gainwright_wire.base import Finite, Flag, Interval, LongText, NonNegative, Positive, ShortText, Wire
 
 BENCH_SENTENCE = (
     "Worst case, the output stays anywhere in its band until somebody notices: nothing is damaged and nobody is hurt."
@@ -65,8 +65,8 @@ class Answer(Wire):
 class StartExperiment(Wire):
     """What a person says when starting a test."""
 
-    attended: bool
-    bench_sentence_signed: bool = False
+    attended: Flag
+    bench_sentence_signed: Flag = False
     resting_output: Finite | None = None
     reference: Finite | None = None
     precision_percent: Annotated[float, Field(ge=1, le=50, allow_inf_nan=False)] | None = None

@@ -100,6 +100,9 @@ def test_loops_are_added_listed_shown_and_replaced_by_the_command(site: Service,
     assert "LIC-311" in listed.stdout
     shown = _run(site, *GAINWRIGHT, "loop", "show", "LIC-311", "--json", folder=tmp_path)
     assert json.loads(shown.stdout)["loop"]["description"] == "added by hand"
+    _run(site, *GAINWRIGHT, "loop", "show", "LIC-311", "--answers-to", "answers.json", folder=tmp_path)
+    answers = json.loads((tmp_path / "answers.json").read_text())
+    assert {answer["verdict"] for answer in answers.values()} == {"fail"}
     unknown = _run(site, *GAINWRIGHT, "loop", "show", "XXX-999", folder=tmp_path)
     assert unknown.returncode == ExitCode.REFUSED
 

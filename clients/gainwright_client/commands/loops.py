@@ -57,6 +57,9 @@ def show_all(url: Url = None, token: Token = None, as_json: AsJson = False) -> N
 @app.command("show")
 def show(
     tag: Annotated[str, typer.Argument(help="The loop's tag.")],
+    answers_to: Annotated[
+        str | None, typer.Option(help="Write the questions still open as a file to fill in, for `tune --answers`.")
+    ] = None,
     url: Url = None,
     token: Token = None,
     as_json: AsJson = False,
@@ -67,10 +70,15 @@ def show(
 
         with Client(url, token) as client:
             kept = client.loop(tag)
-            if as_json:
+            if as_json and answers_to is None:
                 _print(kept.model_dump(mode="json", by_alias=True))
                 return
             forecast = client.forecast(tag)
+        if answers_to is not None:
+            _write_questions(answers_to, forecast.checklist.items)
+        if as_json:
+            _print(kept.model_dump(mode="json", by_alias=True))
+            return
         from gainwright_client.display.checklist import checklist_view, counts
         from gainwright_client.display.forecast import forecast_view
         from gainwright_client.display.screen import screen
@@ -80,6 +88,20 @@ def show(
         console.print(forecast_view(forecast, kept.loop))
         console.print("\n[bold]Checklist before a test[/bold]  ", counts(forecast.checklist))
         console.print(checklist_view(forecast.checklist))
+
+
+def _write_questions(file: str, items: Any) -> None:
+    """Open questions as answers that still say fail, so that a file nobody filled in starts nothing."""
+    from pathlib import Path
+
+    from gainwright_client.recorded import MalformedFile
+
+    open_items = [item for item in items if item.verdict.value != "pass"]
+    document = {item.id: {"verdict": "fail", "reason": item.question} for item in open_items}
+    try:
+        Path(file).write_text(json.dumps(document, indent=2, ensure_ascii=False) + "\n", encoding="utf-8")
+    except OSError as error:
+        raise MalformedFile(file, error.strerror or str(error), "a file that can be written") from error
 
 
 def read_documents(file: str) -> list[dict[str, Any]]:
