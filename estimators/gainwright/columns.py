@@ -113,28 +113,30 @@ def columns_of(
     return Columns(np.stack(matrix, axis=1), slopes, len(answers))
 
 
-def answers_of(shape: Shape, parameters: FloatArray, period: float, drive: Drive, time: FloatArray) -> FloatArray:
+def answers_of(
+    shape: Shape, poles: ComplexArray, dead_time: FloatArray, drive: Drive, time: FloatArray, scale: float
+) -> FloatArray:
     """The process's paths alone, for many parameter sets at once.
 
     Parameters
     ----------
     shape : Shape
-    parameters : ndarray, shape (g, k)
-    period : float, seconds
+    poles : ndarray of complex, shape (g, p), 1/s
+    dead_time : ndarray, shape (g,), seconds
     drive : Drive
     time : ndarray, shape (n,) or (g, n), seconds
+    scale : float, seconds
+        Of the zero's path.
 
     Returns
     -------
     ndarray, shape (g, paths, n)
     """
-    poles, _ = shape.poles(parameters, period)
-    shifted = time - parameters[..., :1] * period
-    modes, _ = mode_answers(drive, poles, shifted)
+    modes, _ = mode_answers(drive, poles, time - dead_time[:, None])
     weights = _weights(shape, poles)
     found = [np.sum(weights[..., None] * modes, axis=-2).real]
     if shape.zero:
-        found.append(np.sum((weights * poles)[..., None] * modes, axis=-2).real * period)
+        found.append(np.sum((weights * poles)[..., None] * modes, axis=-2).real * scale)
     return np.stack(found, axis=-2)
 
 
@@ -152,28 +154,35 @@ def _paths(
     """Answers of each path, shape (n,), and for each parameter of the shape their derivatives."""
     modes, by_pole = mode_answers(drive, poles, shifted)
     weights = _weights(shape, poles)
-    level = drive.level(shifted)
     count = poles.size
     gaps = poles[:, None] - poles[None, :] + np.eye(count)
     turn = 1.0 / gaps - np.eye(count)
     # Logarithmic slope of weight i by pole k.
-    moved = turn - np.diag(np.sum(turn, axis=1))
+    moved = turn - np.diag(turn.sum(axis=1))
     lagging = count - int(shape.integrator)
     moved[:, :lagging] += 1.0 / poles[None, :lagging]
-    answers, changes = [], []
-    for order in range(2 if shape.zero else 1):
+    paths, free = 2 if shape.zero else 1, pole_slopes.shape[1]
+    # Every answer and every slope is one row over the modes, their derivatives and the level in force.
+    rows = np.zeros((paths, 2 + free, 2 * count + 1), dtype=np.complex128)
+    for order in range(paths):
         scale = period**order
-        powers = poles**order
-        whole = weights * powers
-        answers.append((whole @ modes).real * scale)
-        by_time = (whole * poles) @ modes + np.sum(whole) * level
-        # Each pole's derivative: of the weights, of the power, of its own mode.
-        by_weights = (whole[:, None] * moved).T @ modes + whole[:, None] * by_pole
+        whole = weights * poles**order * scale
+        rows[order, 0, :count] = whole
+        rows[order, 1, :count] = -whole * poles * period
+        rows[order, 1, -1] = -whole.sum() * period
+        by_modes = whole[:, None] * moved
         if order:
-            by_weights = by_weights + weights[:, None] * modes
-        by_parameters = (pole_slopes.T @ by_weights).real * scale
-        changes.append([-by_time.real * period * scale, *by_parameters])
-    return answers, [list(change) for change in zip(*changes, strict=True)]
+            by_modes = by_modes + np.diag(weights * scale)
+        rows[order, 2:, :count] = pole_slopes.T @ by_modes.T
+        rows[order, 2:, count : 2 * count] = pole_slopes.T * whole
+    stacked = np.concatenate([modes, by_pole, drive.level(shifted)[None, :]])
+    if stacked.dtype.kind == "c":
+        found = (rows.reshape(-1, 2 * count + 1) @ stacked).real
+    else:
+        found = rows.real.reshape(-1, 2 * count + 1) @ stacked
+    found = found.reshape(paths, 2 + free, -1)
+    answers = [found[order, 0] for order in range(paths)]
+    return answers, [[found[order, 1 + k] for order in range(paths)] for k in range(1 + free)]
 
 
 def _add_initial(

@@ -97,7 +97,7 @@ def candidates_of(
         if weight < LEAST_WEIGHT:
             break
         crossing = crossing_of(fit, latency)
-        if crossing is None or _distance(fit, point, latency) > FAR:
+        if crossing is None or _astray(fit, crossing, point, latency):
             continue
         if not found:
             best, weight = fit.criterion, 1.0
@@ -165,6 +165,13 @@ def projected(best: Candidate, record: Record, cycles: Cycles, noise: float) -> 
     scatter = noise * share
     moved = best.crossing.corrected(complex(np.log(ratio)), scatter)
     return Combined(moved.log_gain, moved.log_period, moved.covariance)
+
+
+def _astray(fit: Fit, crossing: Crossing, point: ResponsePoint, latency: float) -> bool:
+    """Whether a fit crosses over far from the oscillation and does not show the measured response there either: one
+    whose static gain has the wrong sign, say, because a drift was taken for it."""
+    away = abs(crossing.log_period - math.log(2 * math.pi / point.omega_rad_s))
+    return away > FAR and _distance(fit, point, latency) > FAR
 
 
 def _distance(fit: Fit, point: ResponsePoint, latency: float) -> float:

@@ -17,16 +17,16 @@ from gainwright.columns import Columns, Upsets, answers_of, columns_of
 from gainwright.modes import Drive
 from gainwright.noise import Whitening, correlation_of
 from gainwright.record import Record
-from gainwright.structures import Shape
+from gainwright.structures import Shape, start_poles
 
 FloatArray = npt.NDArray[np.float64]
 
-MOST_STEPS = 40
+MOST_STEPS = 20
 LARGEST_STEP = np.array([0.15, 1.0])
 """Of the dead time (periods) and of the logarithms, in one search step."""
-SETTLED = 1e-6
+SETTLED = 1e-5
 SETTLED_STEP = 1e-2
-MOST_DAMPINGS = 6
+MOST_DAMPINGS = 4
 EXACT = 1e-12
 """A residual's variance below this share of the record's needs no further step."""
 LOOKED_FOR = 6.0
@@ -152,7 +152,7 @@ class Fit:
 
 
 def best_starts(problem: Problem, shape: Shape) -> list[FloatArray]:
-    """The best places of the shape's grid on a thinned record; with a zero the best of either sign.
+    """The best places of the shape's grid on a thinned record, one for each valley that a search could miss.
 
     Parameters
     ----------
@@ -166,14 +166,20 @@ def best_starts(problem: Problem, shape: Shape) -> list[FloatArray]:
     grid = shape.starts()
     stride = max(1, problem.time.size // THINNED)
     time, value = problem.time[::stride], problem.value[::stride]
-    answers = np.swapaxes(answers_of(shape, grid, problem.period, problem.drive, time), -1, -2)
+    period = problem.period
+    answers = answers_of(shape, start_poles(shape) / period, grid[:, 0] * period, problem.drive, time, period)
+    answers = np.swapaxes(answers, -1, -2)
     columns = np.concatenate([answers, np.ones((*answers.shape[:-1], 1))], axis=-1)
     scale = np.sqrt(np.sum(columns**2, axis=-2, keepdims=True)) + TINY
     basis, triangle = np.linalg.qr(columns / scale)
     seen = np.swapaxes(basis, -1, -2) @ value
     costs = value @ value - np.sum(seen**2, axis=-1)
     if not shape.zero:
-        return [grid[int(np.argmin(costs))]]
+        if not (shape.lag and shape.pair):
+            return [grid[int(np.argmin(costs))]]
+        # A complex pair beside a lag and three real poles lie in different valleys.
+        complex_pair = grid[:, -1] < 0.0
+        return [grid[int(np.argmin(np.where(side, costs, np.inf)))] for side in (complex_pair, ~complex_pair)]
     sizes = np.linalg.solve(triangle + 1e-12 * np.eye(triangle.shape[-1]), seen[..., None])[..., 0] / scale[..., 0, :]
     positive = sizes[:, 0] * sizes[:, 1] > 0
     return [grid[int(np.argmin(np.where(side, costs, np.inf)))] for side in (positive, ~positive) if bool(np.any(side))]
@@ -228,20 +234,20 @@ class _Search:
             there, damping = self._better(here, damping)
             if there is None:
                 break
-            cost = self._cost(there, here.variance)
-            gained = self._cost(here, here.variance) - cost
-            moved = float(np.max(np.abs(there.parameters - here.parameters)))
             here = there
-            if (gained < SETTLED * cost and moved < SETTLED_STEP) or here.variance < self._exact:
+            if here.variance < self._exact:
                 break
         return here.fit(self._shape, self._problem, self._weight)
 
     def _better(self, here: _Place, damping: float) -> tuple[_Place | None, float]:
-        """A place of less cost one step on, and the damping for the next; None where no step helps."""
+        """A place of less cost one step on, and the damping for the next; None where no step is worth taking."""
         gradient, normal, prior = self._slope(here)
         cost = self._cost(here, here.variance)
         for _ in range(MOST_DAMPINGS):
             step = self._step(here.parameters, gradient, normal + np.diag(damping * np.diag(normal) + prior))
+            promised = -float(gradient @ step) / 2
+            if promised < SETTLED * cost and float(np.max(np.abs(step))) < SETTLED_STEP:
+                return None, damping
             there = self._at(self._bounded(here.parameters + step))
             if there is not None and self._cost(there, here.variance) < cost:
                 return there, damping / 10.0

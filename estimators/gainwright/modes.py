@@ -8,6 +8,7 @@ of the pole is another such mode. Knows no structures, gains or noise.
 from __future__ import annotations
 
 from dataclasses import dataclass
+from typing import Any
 
 import numpy as np
 import numpy.typing as npt
@@ -67,6 +68,17 @@ def mode_answers(drive: Drive, poles: ComplexArray, time: FloatArray) -> tuple[A
     tuple of two ndarray, shape (..., k, n)
         Real where all poles are.
     """
+    if poles.ndim == 1 and poles.size > 1 and poles[0].imag != 0.0:
+        # The second of a complex pair answers as the conjugate of the first.
+        own, own_slopes = _answered(drive, np.delete(poles, 1), time)
+        order = np.maximum(np.arange(poles.size) - 1, 0)
+        answers, derivatives = own[order], own_slopes[order]
+        answers[1], derivatives[1] = own[0].conj(), own_slopes[0].conj()
+        return answers, derivatives
+    return _answered(drive, poles, time)
+
+
+def _answered(drive: Drive, poles: ComplexArray, time: FloatArray) -> tuple[AnyArray, AnyArray]:
     pole: AnyArray = poles if np.any(poles.imag) else poles.real
     states, slopes = _at_changes(drive, pole)
     place = np.searchsorted(drive.times, time, side="right") - 1
@@ -74,8 +86,11 @@ def mode_answers(drive: Drive, poles: ComplexArray, time: FloatArray) -> tuple[A
     place = np.maximum(place, 0)
     since = ((time - drive.times[place]) * seen)[..., None, :]
     level = (drive.levels[place] * seen)[..., None, :]
-    at = np.broadcast_to(place[..., None, :], (*states.shape[:-1], time.shape[-1]))
-    state, slope = np.take_along_axis(states, at, axis=-1), np.take_along_axis(slopes, at, axis=-1)
+    if place.ndim == 1:
+        state, slope = np.take(states, place, axis=-1), np.take(slopes, place, axis=-1)
+    else:
+        at = np.broadcast_to(place[..., None, :], (*states.shape[:-1], time.shape[-1]))
+        state, slope = np.take_along_axis(states, at, axis=-1), np.take_along_axis(slopes, at, axis=-1)
     decay, filled, filled_slope = _advance(pole[..., None], since)
     return decay * state + filled * level, decay * (slope + since * state) + filled_slope * level
 
@@ -87,15 +102,29 @@ def _at_changes(drive: Drive, poles: AnyArray) -> tuple[AnyArray, AnyArray]:
     lengths = np.diff(drive.times)
     decay, filled, filled_slope = _advance(poles[..., None], lengths)
     forced, forced_slope = filled * drive.levels[:-1], filled_slope * drive.levels[:-1]
-    # Changes first, so that each step of the recursion is one contiguous row.
-    decay, forced, forced_slope = (np.moveaxis(one, -1, 0) for one in (decay, forced, forced_slope))
+    if poles.ndim == 1:
+        _recur(states, slopes, decay.tolist(), forced.tolist(), forced_slope.tolist(), lengths.tolist())
+        return states, slopes
     state = np.zeros(poles.shape, dtype=poles.dtype)
     slope = np.zeros(poles.shape, dtype=poles.dtype)
     for k in range(lengths.size):
-        slope = decay[k] * (slope + lengths[k] * state) + forced_slope[k]
-        state = decay[k] * state + forced[k]
+        slope = decay[..., k] * (slope + lengths[k] * state) + forced_slope[..., k]
+        state = decay[..., k] * state + forced[..., k]
         states[..., k + 1], slopes[..., k + 1] = state, slope
     return states, slopes
+
+
+def _recur(states: AnyArray, slopes: AnyArray, decay: Any, forced: Any, forced_slope: Any, lengths: Any) -> None:
+    """The recursion of a few modes in plain numbers: arrays of three would cost ten times as much."""
+    for mode in range(len(decay)):
+        state = slope = 0.0
+        held, held_slope = [state], [slope]
+        for d, f, g, h in zip(decay[mode], forced[mode], forced_slope[mode], lengths, strict=True):
+            slope = d * (slope + h * state) + g
+            state = d * state + f
+            held.append(state)
+            held_slope.append(slope)
+        states[mode], slopes[mode] = held, held_slope
 
 
 def _advance(pole: AnyArray, length: FloatArray) -> tuple[AnyArray, AnyArray, AnyArray]:

@@ -31,7 +31,7 @@ MOST_COLOURS = 2
 SAME_COLOUR = 0.05
 MOST_MISSING = 4
 ROUGH_STEPS = 7
-IN_QUESTION = 60.0
+IN_QUESTION = 40.0
 """Structures further than this from the best criterion, in units of its own colour, are not looked at again."""
 LEAST_SAMPLES = 20
 """Fewer samples than this are hardly more than the numbers to be fitted."""
@@ -155,7 +155,10 @@ def _again(problem: Problem, before: Fit) -> Fit:
 
 def _first_looks(problem: Problem) -> list[Fit]:
     """Each structure without a zero, roughly, from the best start of its grid; best first."""
-    looks = [fit(problem, shape, best_starts(problem, shape)[0], ROUGH_STEPS) for shape in FAMILY if not shape.zero]
+    plain = [shape for shape in FAMILY if not shape.zero]
+    looks = [
+        _best([fit(problem, shape, start, ROUGH_STEPS) for start in best_starts(problem, shape)]) for shape in plain
+    ]
     return sorted((one for one in looks if one is not None), key=lambda one: one.criterion)
 
 
@@ -170,8 +173,12 @@ def _all_beside(lead: Fit, rivals: list[Fit]) -> list[Fit]:
         if one.shape.name in found or one.criterion > limit:
             continue
         start = one.parameters[: one.shape.parameters]
-        starts = [start, *(_beside(found["third"]) if one.shape.zero and "third" in found else [])]
-        again = _best([fit(problem, one.shape, s) for s in starts])
+        if one.shape.zero and "third" in found and one.problem.upsets != problem.upsets:
+            # What it explained before may have been a disturbance: it starts anew as well.
+            looks = [fit(problem, one.shape, other, ROUGH_STEPS) for other in (start, *_beside(found["third"]))]
+            best = _best(looks)
+            start = start if best is None else best.parameters[: one.shape.parameters]
+        again = fit(problem, one.shape, start)
         if again is not None:
             found[one.shape.name] = again
     return sorted(found.values(), key=lambda one: one.criterion)
@@ -289,7 +296,9 @@ def _load_columns(best: Fit, times: FloatArray) -> FloatArray:
     """The fitted process's answers to unit loads at given times, shape (n, t)."""
     problem, own = best.problem, best.shape.parameters
     one = Drive(np.zeros(1), np.ones(1))
+    poles, _ = best.shape.poles(best.parameters[:own], problem.period)
+    dead_time = np.zeros(1) + best.parameters[0] * problem.period
     shifted = problem.time[None, :] - times[:, None]
-    repeated = np.repeat(best.parameters[None, :own], times.size, axis=0)
-    answers = answers_of(best.shape, repeated, problem.period, one, shifted)
+    every = np.broadcast_to(poles, (times.size, poles.size))
+    answers = answers_of(best.shape, every, dead_time, one, shifted, problem.period)
     return np.asarray(np.einsum("p,gpn->ng", best.linear[: best.paths], answers))

@@ -7,6 +7,8 @@ are kept a little apart, so that every process is a plain sum of modes.
 
 from __future__ import annotations
 
+import cmath
+import functools
 import math
 from dataclasses import dataclass
 
@@ -26,7 +28,7 @@ AT_ORIGIN = 1e-8
 """The integrator's pole, in reciprocal periods: flat over any record."""
 
 
-@dataclass(frozen=True, slots=True, eq=False)
+@dataclass(frozen=True, slots=True)
 class Shape:
     """What a structure is made of, besides dead time and gain.
 
@@ -53,7 +55,7 @@ class Shape:
 
         Parameters
         ----------
-        parameters : ndarray, shape (..., k)
+        parameters : ndarray, shape (k,)
             Dead time over period; then the logarithm of the lag over period; then of the pair's frequency times
             period, and of its damping. Only what the structure has.
         period : float, seconds
@@ -61,40 +63,32 @@ class Shape:
         Returns
         -------
         tuple
-            Poles, shape (..., p), and slopes, shape (..., p, k - 1), 1/s.
+            Poles, shape (p,), the pair first, and slopes, shape (p, k - 1), 1/s.
         """
-        place, free = 1, parameters.shape[-1] - 1
-        columns: list[ComplexArray] = []
-        slopes: list[ComplexArray] = []
-        lag = None
-        if self.lag:
-            lag = -np.exp(-parameters[..., 1]) / period
-            place = 2
+        found: list[complex] = []
+        slopes: list[list[complex]] = []
+        place = 2 if self.lag else 1
+        leading = [0.0] * (place - 1)
         if self.pair:
-            omega = np.exp(parameters[..., place]) / period
-            damping = np.exp(parameters[..., place + 1])
+            omega, damping = math.exp(parameters[place]) / period, math.exp(parameters[place + 1])
             split = damping**2 - 1.0
-            apart = np.where(np.abs(split) < APART, np.where(split < 0, -APART, APART), split)
-            root = np.sqrt(apart.astype(np.complex128))
-            for sign in (1.0, -1.0):
-                pole = omega * (-damping + sign * root)
-                slope = np.zeros((*pole.shape, free), dtype=np.complex128)
-                slope[..., place - 1] = pole
-                slope[..., place] = omega * (-damping + sign * damping**2 / root)
-                columns.append(np.asarray(pole, dtype=np.complex128))
-                slopes.append(slope)
-            if lag is not None:
-                lag = _kept_away(lag, columns)
-        if lag is not None:
-            slope = np.zeros((*np.shape(lag), free), dtype=np.complex128)
-            slope[..., 0] = -lag
-            columns.append(lag.astype(np.complex128))
-            slopes.append(slope)
+            if abs(split) < APART:
+                split = math.copysign(APART, split)
+            root = cmath.sqrt(split)
+            for signed in (root, -root):
+                pole = omega * (-damping + signed)
+                found.append(pole)
+                slopes.append([*leading, pole, omega * (-damping + damping**2 / signed)])
+        if self.lag:
+            lag = -math.exp(-parameters[1]) / period
+            if any(abs(lag - other) < NEAR * abs(lag) for other in found):
+                lag *= 1.0 + 2.0 * NEAR
+            found.append(lag)
+            slopes.append([-lag + 0j] + [0j] * (2 if self.pair else 0))
         if self.integrator:
-            shape = np.shape(parameters[..., 0])
-            columns.append(np.full(shape, -AT_ORIGIN / period, dtype=np.complex128))
-            slopes.append(np.zeros((*shape, free), dtype=np.complex128))
-        return np.stack(columns, axis=-1), np.stack(slopes, axis=-2)
+            found.append(-AT_ORIGIN / period)
+            slopes.append([0j] * (self.parameters - 1))
+        return np.array(found, dtype=np.complex128), np.array(slopes, dtype=np.complex128).reshape(len(found), -1)
 
     def starts(self) -> FloatArray:
         """A small grid of parameters, shape (g, k), from which the best are refined."""
@@ -178,9 +172,16 @@ FAMILY = (
 )
 
 
-def _kept_away(lag: FloatArray, others: list[ComplexArray]) -> FloatArray:
-    """A real pole moved off any other that it would coincide with."""
-    for other in others:
-        gap = np.abs(lag - other) / np.abs(lag)
-        lag = np.where(gap < NEAR, lag * (1.0 + 2.0 * NEAR), lag)
-    return lag
+@functools.cache
+def start_poles(shape: Shape) -> ComplexArray:
+    """Poles of a shape's starts for a period of one second, shape (g, p).
+
+    Parameters
+    ----------
+    shape : Shape
+
+    Returns
+    -------
+    ndarray of complex
+    """
+    return np.stack([shape.poles(start, 1.0)[0] for start in shape.starts()])

@@ -11,12 +11,15 @@ from __future__ import annotations
 
 import argparse
 import math
+import os
 import sys
 import time
 import zlib
 from concurrent.futures import ProcessPoolExecutor
 from dataclasses import dataclass
 from pathlib import Path
+
+os.environ.setdefault("OPENBLAS_NUM_THREADS", "1")
 
 import numpy as np
 

@@ -8,7 +8,7 @@ from typing import Any
 import pytest
 
 from experiment_bench import DEVICE, Bench, run
-from gainwright_service.adapters.port import Mode, Watchdog
+from gainwright_service.adapters.port import Mode, Quality, Watchdog
 from gainwright_service.adapters.simulated import SimulatedAdapter
 from gainwright_service.clock import ManualClock
 from gainwright_service.errors import DeviceTimedOut, DeviceUnreachable
@@ -169,3 +169,59 @@ async def test_without_a_trusted_lock_nothing_is_written_the_exit_included() -> 
     assert {name for name, _ in made[0].calls} <= {"read"}
     assert ended.outcome is Outcome.INTERRUPTED
     assert ended.exit in (Exit.UNVERIFIED, Exit.NOT_WRITTEN)
+
+
+class BadSignal(Faulty):
+    """A loop whose signal can go bad: quality bad, value far off."""
+
+    bad = False
+
+    def __getattr__(self, name: str) -> Any:
+        verb = super().__getattr__(name)
+        if name != "read":
+            return verb
+
+        async def read(*arguments: Any, **options: Any) -> Any:
+            found = await verb(*arguments, **options)
+            return replace(found, quality=Quality.BAD, process_variable=1e6) if self.bad else found
+
+        return read
+
+
+async def test_nothing_is_decided_on_a_bad_signal_and_its_age_ends_the_test() -> None:
+    made: list[BadSignal] = []
+
+    def adapter(inner: SimulatedAdapter) -> BadSignal:
+        made.append(BadSignal(inner))
+        return made[0]
+
+    async def act(bench: Bench) -> None:
+        await bench.after(18.03)
+        made[0].bad = True
+        made[0].calls.clear()
+
+    ended, _ = await run(adapter=adapter, act=act)
+    written = [options for name, options in made[0].calls if name == "write"]
+    assert ended.limit is not None
+    assert ended.limit["item"] == "D7"
+    assert ended.outcome is Outcome.LOST
+    assert all(options.get("urgent") for options in written), "only the exit is written"
+
+
+async def test_a_loop_found_in_automatic_is_not_given_back_to_it_without_a_good_signal() -> None:
+    made: list[BadSignal] = []
+
+    def adapter(inner: SimulatedAdapter) -> BadSignal:
+        made.append(BadSignal(inner))
+        return made[0]
+
+    async def act(bench: Bench) -> None:
+        await bench.after(18.03)
+        made[0].bad = True
+        made[0].calls.clear()
+        bench.signals.request_stop("Ada")
+
+    ended, _ = await run(device=replace(DEVICE, mode=Mode.AUTOMATIC), adapter=adapter, act=act)
+    assert (ended.outcome, ended.exit) == (Outcome.STOPPED, Exit.UNVERIFIED)
+    assert "no good signal" in ended.exit_detail
+    assert not [name for name, _ in made[0].calls if name == "hand_back"]

@@ -11,7 +11,7 @@ from dataclasses import dataclass, replace
 
 from gainwright_service.experiment.events import Trip
 from gainwright_service.experiment.plan import Plan
-from gainwright_service.experiment.readings import Mode, Quality, Reading
+from gainwright_service.experiment.readings import Mode, Reading
 
 HARD_DEVIATION = 1.2
 """D1 ends at once beyond this multiple of the allowed deviation, else on two samples in a row."""
@@ -121,8 +121,7 @@ class Guard:
         guard, yielded, disobeyed = self._ownership(reading, now)
         if yielded is not None:
             return Inspection(guard, yielded)
-        usable = reading.quality is not Quality.BAD
-        if usable:
+        if reading.usable:
             guard = replace(guard, watch=replace(guard.watch, newest_good_at=reading.taken_at))
             guard, trip = guard._process_variable(reading)
             if trip is not None:

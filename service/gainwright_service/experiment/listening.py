@@ -12,7 +12,7 @@ from dataclasses import dataclass, field
 from gainwright_service.experiment.commands import Facts
 from gainwright_service.experiment.events import Trip
 from gainwright_service.experiment.plan import Plan
-from gainwright_service.experiment.readings import Mode, Quality, Reading
+from gainwright_service.experiment.readings import Mode, Reading
 
 HYSTERESIS_SIGMAS = 3.0
 """Half-width against chatter: 2.5 sigma to 100 samples per period, 3 at 400 (safety document, section 4)."""
@@ -39,7 +39,7 @@ class Baseline:
         """Take one reading of good or uncertain quality."""
         self.newest = reading
         self.modes.add(reading.mode)
-        if reading.quality is Quality.BAD:
+        if not reading.usable:
             return
         self.times.append(reading.taken_at)
         self.values.append(reading.process_variable)

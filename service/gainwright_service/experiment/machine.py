@@ -171,6 +171,9 @@ class Machine:
     def _swing(self, event: Sampled) -> Commands:
         if self._law is None or self._excitation is None:
             return self._astray(event)
+        if not event.reading.usable:
+            # Nothing is decided on a bad signal; its age is the guard's.
+            return ()
         deviation = event.reading.process_variable - self._law.reference
         self.worst_deviation = max(self.worst_deviation, abs(deviation))
         self._extreme = min(self._extreme, deviation) if self._side is Side.UP else max(self._extreme, deviation)

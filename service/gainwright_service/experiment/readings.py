@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import math
 from dataclasses import dataclass
 from enum import StrEnum
 
@@ -52,3 +53,8 @@ class Reading:
     quality: Quality
     taken_at: float
     source_time: float | None = None
+
+    @property
+    def usable(self) -> bool:
+        """Whether the process variable may be judged and acted on: a bad or impossible one never is."""
+        return self.quality is not Quality.BAD and math.isfinite(self.process_variable)

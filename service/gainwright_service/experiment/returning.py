@@ -182,6 +182,10 @@ class Return:
                 return (), Ending(Exit.UNVERIFIED, f"{at}; left in manual at {self.exit_output:g}, found in "
                                   f"{self.facts.mode}")  # fmt: skip
             return (), Ending(Exit.VERIFIED, at)
+        if not reading.usable:
+            if now - self.began_at <= self.plan.return_time_s:
+                return NOTHING
+            return (), Ending(Exit.UNVERIFIED, f"{at}; left in manual: the process variable has no good signal")
         deviation = reading.process_variable - self.facts.reference
         bound = self.plan.deviation_up if deviation >= 0 else self.plan.deviation_down
         if abs(deviation) > BAND_SHARE * bound and now - self.began_at <= self.plan.return_time_s:
