@@ -18,11 +18,16 @@ from gainwright.combination import Candidate, Combined, candidates_of, combined,
 from gainwright.cycles import Cycles, find_cycles
 from gainwright.describing import ultimate_gain_from_swing
 from gainwright.errors import OutOfDomain
-from gainwright.findings import BOUNDS, cycle_findings, grade_of, judge, settling
+from gainwright.findings import BOUNDS, grade_of, judge
 from gainwright.frequency import response_points
 from gainwright.record import Record
 from gainwright.results import Analysis, Estimate, Finding, Grade, UltimatePoint, Verdict, WeightedModel
 from gainwright.selection import Explanation, explain
+from gainwright.symptoms.evidence import Declared, Evidence
+from gainwright.symptoms.output import output
+from gainwright.symptoms.response import no_response, response
+from gainwright.symptoms.signal import signal
+from gainwright.symptoms.swinging import swinging
 
 OutputIs = Literal["applied_after", "read_back_before"]
 
@@ -36,6 +41,11 @@ def analyse(
     latency_s: float = 0.0,
     latency_jitter_s: float = 0.0,
     confidence: float = 0.95,
+    effect: int | None = None,
+    commanded_amplitude: float | None = None,
+    output_resolution: float | None = None,
+    filter_time_s: float | None = None,
+    clock_error: float | None = None,
 ) -> Analysis:
     """Analyse a record of a relay test.
 
@@ -54,6 +64,14 @@ def analyse(
     latency_jitter_s : float, seconds, >= 0
         Standard deviation of that time; its mean over the switches enters the interval.
     confidence : float, in (0.5, 1)
+    effect : {1, -1} or None
+        Declared: +1 where a rising output raises the process variable, -1 where it lowers it.
+    commanded_amplitude, output_resolution : float or None, output units, > 0
+        The relay amplitude that was asked for, and the output's smallest step.
+    filter_time_s : float or None, seconds, > 0
+        Time constant of a filter on the process variable.
+    clock_error : float or None
+        Share by which the record's clock differs from another, e.g. 0.001.
 
     Returns
     -------
@@ -66,10 +84,17 @@ def analyse(
         For an argument outside its domain.
     """
     _check(reference, hysteresis, output_is, latency_s, latency_jitter_s, confidence)
+    declared = Declared(
+        effect, commanded_amplitude, output_resolution, filter_time_s, clock_error, latency_s, latency_jitter_s
+    )
+    _check_declared(declared)
     if output_is == "read_back_before":
         record = _moved(record, -1)
     cycles = find_cycles(record)
     if cycles.count < 1:
+        silent = no_response(record)
+        if silent is not None:
+            return _unusable(cycles, confidence, "no_response", BOUNDS["no_response"][1], silent)
         return _unusable(cycles, confidence, "few_cycles", "no whole cycle with equal output levels")
     swing = float(np.mean(cycles.swings))
     if not swing > 1e-9 * float(np.max(np.abs(record.process_variable))):
@@ -79,7 +104,7 @@ def analyse(
         record, cycles, shift, reference, hysteresis
     )
     alignment = judge("columns_misaligned", max(misaligned, 0.0))
-    options = _Options(reference, hysteresis, latency_s, latency_jitter_s, confidence)
+    options = _Options(hysteresis, confidence, declared)
     found = _analysed(record, cycles, swing, options, alignment)
     if alignment.verdict is Verdict.PASS:
         return found
@@ -92,11 +117,9 @@ def analyse(
 
 @dataclass(frozen=True, slots=True)
 class _Options:
-    reference: float | None
     hysteresis: float | None
-    latency: float
-    jitter: float
     confidence: float
+    declared: Declared
 
 
 def _analysed(record: Record, cycles: Cycles, swing: float, options: _Options, alignment: Finding) -> Analysis:
@@ -106,35 +129,31 @@ def _analysed(record: Record, cycles: Cycles, swing: float, options: _Options, a
     width = options.hysteresis
     if width is None:
         width = _hysteresis(record, cycles, swing)
-    points = response_points(record, cycles, noise=noise, latency=options.latency)
+    latency = options.declared.latency
+    points = response_points(record, cycles, noise=noise, latency=latency)
     spread = _quantile(options.confidence)
-    candidates = candidates_of(explanation, record, cycles, points[0], options.latency) if points else []
-    jitter = options.jitter / math.sqrt(cycles.switches.size)
-    findings = [
-        alignment,
-        *cycle_findings(record, cycles, hysteresis=min(width, 0.99 * swing), noise=noise, quantum=quantum),
-    ]
+    candidates = candidates_of(explanation, record, cycles, points[0], latency) if points else []
+    jitter = options.declared.latency_jitter / math.sqrt(cycles.switches.size)
+    seen = min(width, 0.99 * swing)
+    evidence = Evidence(record, cycles, explanation, candidates, options.declared, swing, noise, quantum, seen)
+    findings = [alignment, *swinging(evidence), *output(evidence), *signal(evidence), *response(evidence)]
     crossover = measured = ultimate = None
     if candidates:
         crossover = _point(combined(candidates, explanation, swing, jitter, measured=False), spread)
-        measured = _point(projected(candidates[0], record, cycles, noise), spread)
+        measured = _point(projected(candidates[0], record, cycles), spread)
         ultimate = _point(combined(candidates, explanation, swing, jitter, measured=True), spread)
-        findings.append(judge("estimates_apart", abs(math.log(measured.gain.value / crossover.gain.value))))
+        findings.append(judge("estimates_apart", _apart(measured, crossover)))
         findings.append(judge("interval_wide", (ultimate.gain.high - ultimate.gain.low) / ultimate.gain.value / 2))
-    if explanation.fits:
-        findings.append(judge("unlike_model", _misfit(explanation, noise, swing)))
-        explained = findings[-1].verdict is Verdict.PASS
-        findings.append(settling(record, cycles, noise=noise, explained=explained))
     grade, reasons = grade_of(findings)
     if ultimate is None:
         grade, reasons = Grade.UNUSABLE, (*reasons, "no model and no measured point reach the crossover")
     cause, remedy = _dominant(noise, swing, quantum, cycles, record)
     usable = ultimate if grade is not Grade.UNUSABLE else None
-    models = _models(candidates, options.latency)
+    models = _models(candidates, latency)
     return Analysis(
         ultimate_gain=usable.gain if usable else None,
         ultimate_period=usable.period if usable else None,
-        describing_function=_textbook(cycles, swing, min(width, 0.99 * swing)),
+        describing_function=_textbook(cycles, swing, seen),
         fourier=measured,
         model_crossover=crossover,
         response_points=points,
@@ -152,6 +171,12 @@ def _analysed(record: Record, cycles: Cycles, swing: float, options: _Options, a
         dominant_uncertainty=cause,
         remedy=remedy,
     )
+
+
+def _apart(measured: UltimatePoint, crossover: UltimatePoint) -> float:
+    """How far the two gains lie apart, beyond what the noise of the measured one explains."""
+    explained = math.log(measured.gain.high / measured.gain.low) / 2
+    return max(abs(math.log(measured.gain.value / crossover.gain.value)) - explained, 0.0)
 
 
 def _models(candidates: list[Candidate], latency: float) -> tuple[WeightedModel, ...]:
@@ -221,9 +246,20 @@ def _check(
         raise OutOfDomain("confidence", f"is {confidence}", "between 0.5 and 1")
 
 
-def _unusable(cycles: Cycles, confidence: float, name: str, reason: str) -> Analysis:
+def _check_declared(declared: Declared) -> None:
+    if declared.effect not in (None, 1, -1):
+        raise OutOfDomain("effect", f"is {declared.effect}", "+1 (raises), -1 (lowers) or None")
+    for name in ("commanded_amplitude", "output_resolution", "filter_time_s"):
+        value = getattr(declared, name)
+        if value is not None and not (math.isfinite(value) and value > 0):
+            raise OutOfDomain(name, f"is {value}", "above 0, or None")
+    if declared.clock_error is not None and not math.isfinite(declared.clock_error):
+        raise OutOfDomain("clock_error", f"is {declared.clock_error}", "a finite share, or None")
+
+
+def _unusable(cycles: Cycles, confidence: float, name: str, reason: str, value: float = 0.0) -> Analysis:
     bounds, sentence = BOUNDS[name]
-    finding = Finding(name, Verdict.FAIL, 0.0, bounds.caution, bounds.fail, bounds.unit, sentence)
+    finding = Finding(name, Verdict.FAIL, value, bounds.caution, bounds.fail, bounds.unit, sentence)
     return Analysis(
         ultimate_gain=None,
         ultimate_period=None,
@@ -297,12 +333,6 @@ def _textbook(cycles: Cycles, swing: float, hysteresis: float) -> UltimatePoint:
 def _interval(log_value: float, half: float) -> Estimate:
     half = min(half, 5.0)
     return Estimate(math.exp(log_value), math.exp(log_value - half), math.exp(log_value + half))
-
-
-def _misfit(explanation: Explanation, noise: float, swing: float) -> float:
-    """Fit error beyond the noise, as a share of the swing."""
-    excess = float(np.mean(explanation.fits[0].residual ** 2)) - noise**2
-    return math.sqrt(max(excess, 0.0)) / swing
 
 
 def _dominant(noise: float, swing: float, quantum: float, cycles: Cycles, record: Record) -> tuple[str, str]:

@@ -147,7 +147,7 @@ def combined(
     return Combined(float(mean[0]), float(mean[1]), covariance)
 
 
-def projected(best: Candidate, record: Record, cycles: Cycles, noise: float) -> Combined:
+def projected(best: Candidate, record: Record, cycles: Cycles) -> Combined:
     """The measured response alone, carried to the crossover along the best structure's shape.
 
     Parameters
@@ -155,14 +155,12 @@ def projected(best: Candidate, record: Record, cycles: Cycles, noise: float) -> 
     best : Candidate
     record : Record
     cycles : Cycles
-    noise : float, PV units
 
     Returns
     -------
     Combined
     """
-    ratio, _, share = _ratio(best.fit, record, cycles, cycles.count)
-    scatter = noise * share
+    ratio, scatter = _ratio(best.fit, record, cycles, cycles.count)
     moved = best.crossing.corrected(complex(np.log(ratio)), scatter)
     return Combined(moved.log_gain, moved.log_period, moved.covariance)
 
@@ -185,7 +183,7 @@ def _distance(fit: Fit, point: ResponsePoint, latency: float) -> float:
 def _corrected(fit: Fit, crossing: Crossing, record: Record, cycles: Cycles) -> Crossing:
     """The crossing corrected by the fundamental that the residual holds, as far as it convinces over the noise."""
     later = max(1, (cycles.count + 1) // 2)
-    ratio, scatter, _ = _ratio(fit, record, cycles, later)
+    ratio, scatter = _ratio(fit, record, cycles, later)
     moved = complex(np.log(ratio))
     if abs(moved) == 0.0 or not math.isfinite(abs(moved)):
         return crossing
@@ -193,26 +191,24 @@ def _corrected(fit: Fit, crossing: Crossing, record: Record, cycles: Cycles) -> 
     return crossing.corrected(moved * kept, scatter * kept) if kept > 0 else crossing
 
 
-def _ratio(fit: Fit, record: Record, cycles: Cycles, later: int) -> tuple[complex, float, float]:
-    """The measured fundamental over the fitted one in the last ``later`` cycles, the scatter of either part, and what
-    white noise of unit size would make of it."""
+def _ratio(fit: Fit, record: Record, cycles: Cycles, later: int) -> tuple[complex, float]:
+    """The measured fundamental over the fitted one in the last ``later`` cycles, and the scatter of either part."""
     problem = fit.problem
     edges = record.time[cycles.switches[cycles.scored[-1 - later :]]]
     inside = (problem.time >= edges[0]) & (problem.time < edges[-1])
     time, residual = problem.time[inside], fit.residual[inside]
     if time.size < 8:
-        return 1.0 + 0.0j, 0.0, 0.0
+        return 1.0 + 0.0j, 0.0
     fitted = problem.value[inside] - residual
     omega = 2.0 * math.pi * later / float(edges[-1] - edges[0])
     size = phasor(time, fitted, omega)
     left = phasor(time, residual, omega)
     if abs(size) == 0.0:
-        return 1.0 + 0.0j, 0.0, 0.0
+        return 1.0 + 0.0j, 0.0
     step = float(np.median(np.diff(time)))
     colour = problem.correlation
     density = fit.variance * (1.0 - colour**2) / abs(1.0 - colour * np.exp(-1j * omega * step)) ** 2
-    share = math.sqrt(2.0 / time.size) / abs(size)
-    scatter = math.sqrt(density) * share
+    scatter = math.sqrt(density * 2.0 / time.size) / abs(size)
     if later > 1:
         # What changes from cycle to cycle is noise; misfit comes again.
         each = []
@@ -222,4 +218,4 @@ def _ratio(fit: Fit, record: Record, cycles: Cycles, later: int) -> tuple[comple
                 each.append(phasor(time[part], residual[part], omega) / size)
         if len(each) > 1:
             scatter = min(scatter, math.sqrt(float(np.mean(np.abs(np.diff(each)) ** 2)) / 2 / later))
-    return 1.0 + left / size, scatter, share
+    return 1.0 + left / size, scatter

@@ -37,6 +37,8 @@ class Cycles:
         Half the step between the scored levels and their middle.
     periods, swings, duties : ndarray, shape (c,)
         Seconds, PV units, share of the cycle on the higher level.
+    travel : float, seconds
+        Median time that the output takes from one level to the other; 0 where it steps.
     """
 
     switches: IntArray
@@ -48,6 +50,7 @@ class Cycles:
     periods: FloatArray
     swings: FloatArray
     duties: FloatArray
+    travel: float = 0.0
 
     @property
     def count(self) -> int:
@@ -58,6 +61,34 @@ class Cycles:
     def period(self) -> float:
         """Mean period of the scored cycles, seconds."""
         return float(np.mean(self.periods))
+
+    def runs(self, record: Record) -> list[Run]:
+        """Every run of two alternating levels that holds a whole cycle, in order, measured by its last cycle."""
+        found = []
+        for first, last in _alternating(self.levels):
+            if last - first < 3:
+                continue
+            pair = self.levels[first : first + 2]
+            begin, end = self.switches[last - 3], self.switches[last - 1]
+            found.append(
+                Run(
+                    amplitude=float(abs(pair[1] - pair[0])) / 2,
+                    bias=float(np.mean(pair)),
+                    swing=float(np.ptp(record.process_variable[begin:end])) / 2,
+                    cycles=(last - first - 1) // 2,
+                )
+            )
+        return found
+
+
+@dataclass(frozen=True, slots=True)
+class Run:
+    """Cycles of two levels: half their step, their middle (output units), the swing (PV units), how many are whole."""
+
+    amplitude: float
+    bias: float
+    swing: float
+    cycles: int
 
 
 def find_cycles(record: Record) -> Cycles:
@@ -73,8 +104,8 @@ def find_cycles(record: Record) -> Cycles:
         With no scored cycle where there is none.
     """
     output, time, value = record.controller_output, record.time, record.process_variable
-    switches = np.flatnonzero(np.diff(output) != 0) + 1
-    levels = output[switches]
+    switches, arrived = _switches(output)
+    levels = output[arrived]
     nothing = np.empty(0)
     empty = np.empty(0, dtype=np.intp)
     bounds = _scored_bounds(levels)
@@ -99,22 +130,39 @@ def find_cycles(record: Record) -> Cycles:
         periods=periods,
         swings=swings,
         duties=duties,
+        travel=float(np.median(time[arrived] - time[switches])),
     )
+
+
+def _switches(output: FloatArray) -> tuple[IntArray, IntArray]:
+    """Samples at which a switch begins and at which it has arrived: a ramp of steps to one side is one switch."""
+    change = np.diff(output)
+    places = np.flatnonzero(change != 0)
+    if not places.size:
+        return places, places
+    onward = (np.diff(places) == 1) & (np.sign(change[places[1:]]) == np.sign(change[places[:-1]]))
+    begins = places[np.concatenate([[True], ~onward])]
+    ends = places[np.concatenate([~onward, [True]])]
+    return begins + 1, ends + 1
 
 
 def _scored_bounds(levels: FloatArray) -> IntArray:
     """Places of every second switch in the longest run of two alternating levels; the later of equal runs."""
-    best: tuple[int, int] = (0, 0)
-    start = 0
-    for k in range(2, levels.size + 1):
-        if k < levels.size:
-            step = abs(levels[start] - levels[start + 1]) if start + 1 < levels.size else 0.0
-            if step > 0 and abs(levels[k] - levels[k - 2]) <= SAME_LEVEL * step:
-                continue
-        if k - start >= best[1] - best[0]:
-            best = (start, k)
-        start = k - 1
-    first, last = best
+    first, last = max(_alternating(levels), key=lambda run: (run[1] - run[0], run[0]), default=(0, 0))
     if last - first < 3:
         return np.empty(0, dtype=np.intp)
     return np.arange(first, last, 2, dtype=np.intp)
+
+
+def _alternating(levels: FloatArray) -> list[tuple[int, int]]:
+    """Runs of two alternating levels, as the places of their first switch and after their last."""
+    runs = []
+    start = 0
+    for k in range(2, levels.size + 1):
+        if k < levels.size:
+            step = abs(levels[start] - levels[start + 1])
+            if step > 0 and abs(levels[k] - levels[k - 2]) <= SAME_LEVEL * step:
+                continue
+        runs.append((start, k))
+        start = k - 1
+    return runs

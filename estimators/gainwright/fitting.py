@@ -21,12 +21,12 @@ from gainwright.structures import Shape, start_poles
 
 FloatArray = npt.NDArray[np.float64]
 
-MOST_STEPS = 20
+MOST_STEPS = 12
 LARGEST_STEP = np.array([0.15, 1.0])
 """Of the dead time (periods) and of the logarithms, in one search step."""
-SETTLED = 1e-5
+SETTLED = 1e-4
 SETTLED_STEP = 1e-2
-MOST_DAMPINGS = 4
+MOST_DAMPINGS = 3
 EXACT = 1e-12
 """A residual's variance below this share of the record's needs no further step."""
 LOOKED_FOR = 6.0

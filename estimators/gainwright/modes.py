@@ -130,12 +130,14 @@ def _recur(states: AnyArray, slopes: AnyArray, decay: Any, forced: Any, forced_s
 def _advance(pole: AnyArray, length: FloatArray) -> tuple[AnyArray, AnyArray, AnyArray]:
     """``exp(p h)``, ``(exp(p h) - 1)/p`` and the derivative of the latter by p."""
     exponent = pole * length
-    decay = np.exp(
-        np.maximum(exponent.real, UNDERFLOW) + 1j * exponent.imag if exponent.dtype.kind == "c" else exponent
-    )
-    filled = (decay - 1.0) / pole
-    slope = (length * decay - filled) / pole
-    small = np.abs(exponent) < SMALL
+    if exponent.dtype.kind == "c" and np.min(exponent.real, initial=0.0) < UNDERFLOW:
+        decay = np.exp(np.maximum(exponent.real, UNDERFLOW) + 1j * exponent.imag)
+    else:
+        decay = np.exp(exponent)
+    reciprocal = 1.0 / pole
+    filled = (decay - 1.0) * reciprocal
+    slope = (length * decay - filled) * reciprocal
+    small = np.abs(pole) * length < SMALL
     if np.any(small):
         # Below a thousandth the differences lose digits; four terms of the series are exact there.
         x = exponent[small]

@@ -30,7 +30,7 @@ MOST_UPSETS = 3
 MOST_COLOURS = 2
 SAME_COLOUR = 0.05
 MOST_MISSING = 4
-ROUGH_STEPS = 7
+ROUGH_STEPS = 5
 IN_QUESTION = 40.0
 """Structures further than this from the best criterion, in units of its own colour, are not looked at again."""
 LEAST_SAMPLES = 20
