@@ -21,6 +21,7 @@ from gainwright.errors import OutOfDomain
 from gainwright.findings import BOUNDS, grade_of, judge
 from gainwright.frequency import response_points
 from gainwright.record import Record
+from gainwright.remedies import Remedy, remedy_of
 from gainwright.results import Analysis, Estimate, Finding, Grade, UltimatePoint, Verdict, WeightedModel
 from gainwright.selection import Explanation, explain
 from gainwright.symptoms.evidence import Declared, Evidence
@@ -28,6 +29,8 @@ from gainwright.symptoms.output import output
 from gainwright.symptoms.response import no_response, response
 from gainwright.symptoms.signal import signal
 from gainwright.symptoms.swinging import swinging
+
+LEAST_BASELINE = 20
 
 OutputIs = Literal["applied_after", "read_back_before"]
 
@@ -124,7 +127,7 @@ class _Options:
 
 def _analysed(record: Record, cycles: Cycles, swing: float, options: _Options, alignment: Finding) -> Analysis:
     explanation = explain(record, cycles)
-    noise = _noise(record, explanation)
+    noise = _noise(record, cycles, explanation)
     quantum = _quantum(record)
     width = options.hysteresis
     if width is None:
@@ -138,16 +141,18 @@ def _analysed(record: Record, cycles: Cycles, swing: float, options: _Options, a
     evidence = Evidence(record, cycles, explanation, candidates, options.declared, swing, noise, quantum, seen)
     findings = [alignment, *swinging(evidence), *output(evidence), *signal(evidence), *response(evidence)]
     crossover = measured = ultimate = None
+    remedy = Remedy("", "")
     if candidates:
         crossover = _point(combined(candidates, explanation, swing, jitter, measured=False), spread)
         measured = _point(projected(candidates[0], record, cycles), spread)
-        ultimate = _point(combined(candidates, explanation, swing, jitter, measured=True), spread)
+        whole = combined(candidates, explanation, swing, jitter, measured=True)
+        ultimate = _point(whole, spread)
+        remedy = remedy_of(whole.causes, spread=spread, cycles=cycles.count, noise=noise, quantum=quantum)
         findings.append(judge("estimates_apart", _apart(measured, crossover)))
         findings.append(judge("interval_wide", (ultimate.gain.high - ultimate.gain.low) / ultimate.gain.value / 2))
     grade, reasons = grade_of(findings)
     if ultimate is None:
         grade, reasons = Grade.UNUSABLE, (*reasons, "no model and no measured point reach the crossover")
-    cause, remedy = _dominant(noise, swing, quantum, cycles, record)
     usable = ultimate if grade is not Grade.UNUSABLE else None
     models = _models(candidates, latency)
     return Analysis(
@@ -168,8 +173,8 @@ def _analysed(record: Record, cycles: Cycles, swing: float, options: _Options, a
         noise=noise,
         scored_cycles=cycles.count,
         confidence=options.confidence,
-        dominant_uncertainty=cause,
-        remedy=remedy,
+        dominant_uncertainty=remedy.cause,
+        remedy=remedy.advice,
     )
 
 
@@ -292,12 +297,27 @@ def _quantile(confidence: float) -> float:
     return low
 
 
-def _noise(record: Record, explanation: Explanation) -> float:
-    """Standard deviation by the best fit, less its misfit; by second differences without one."""
+def _noise(record: Record, cycles: Cycles, explanation: Explanation) -> float:
+    """Standard deviation, by what a misfit does not reach: neighbouring residuals, and the quiet baseline.
+
+    Neighbours alone see little of coloured noise, a baseline alone may be short; the larger one is taken, but never
+    more than the whole residual.
+    """
     if not explanation.fits:
-        return float(np.median(np.abs(np.diff(record.process_variable, 2)))) / 0.6745 / math.sqrt(6)
-    power = float(np.mean(explanation.fits[0].residual ** 2)) - explanation.misfit**2
-    return math.sqrt(max(power, 0.0))
+        return _by_neighbours(record.process_variable)
+    residual = explanation.fits[0].residual
+    found = _by_neighbours(residual)
+    if cycles.baseline >= LEAST_BASELINE:
+        time, quiet = record.time[: cycles.baseline], record.process_variable[: cycles.baseline]
+        centred = time - time.mean()
+        left = quiet - quiet.mean() - centred * float(centred @ quiet) / float(centred @ centred)
+        found = max(found, float(np.std(left, ddof=2)))
+    return min(found, float(np.sqrt(np.mean(residual**2))))
+
+
+def _by_neighbours(value: np.ndarray) -> float:
+    """Standard deviation of white noise by second differences, which drift and slow motion do not reach."""
+    return float(np.median(np.abs(np.diff(value, 2)))) / 0.6745 / math.sqrt(6)
 
 
 def _quantum(record: Record) -> float:
@@ -333,20 +353,3 @@ def _textbook(cycles: Cycles, swing: float, hysteresis: float) -> UltimatePoint:
 def _interval(log_value: float, half: float) -> Estimate:
     half = min(half, 5.0)
     return Estimate(math.exp(log_value), math.exp(log_value - half), math.exp(log_value + half))
-
-
-def _dominant(noise: float, swing: float, quantum: float, cycles: Cycles, record: Record) -> tuple[str, str]:
-    """The largest cause of the interval's width, and the cheapest way to halve it."""
-    samples = cycles.period / float(np.median(np.diff(record.time)))
-    causes = {
-        "noise": noise / swing / math.sqrt(samples * cycles.count),
-        "quantum": quantum / swing / math.sqrt(12 * samples * cycles.count),
-        "sampling": 0.3 / samples / cycles.count,
-    }
-    cause = max(causes, key=lambda name: causes[name])
-    remedies = {
-        "noise": f"twice the amplitude, or {4 * cycles.count} cycles in place of {cycles.count}",
-        "quantum": "twice the amplitude",
-        "sampling": "half the sample interval",
-    }
-    return cause, remedies[cause]

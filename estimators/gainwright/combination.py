@@ -8,7 +8,7 @@ from __future__ import annotations
 
 import itertools
 import math
-from dataclasses import dataclass
+from dataclasses import dataclass, field
 
 import numpy as np
 import numpy.typing as npt
@@ -46,11 +46,14 @@ class Combined:
     ----------
     log_gain, log_period : float
     covariance : ndarray, shape (2, 2)
+    causes : dict of str to float
+        The gain's variance by its causes: noise, structure, latency, misfit.
     """
 
     log_gain: float
     log_period: float
     covariance: FloatArray
+    causes: dict[str, float] = field(default_factory=dict)
 
 
 @dataclass(frozen=True, slots=True, eq=False)
@@ -132,19 +135,25 @@ def combined(
     mean = weights @ points
     best = candidates[0]
     inflation = inflation_of(best.fit.white)
-    covariance = np.zeros((2, 2))
+    noisy, spread, late = np.zeros((2, 2)), np.zeros((2, 2)), np.zeros((2, 2))
     for weight, crossing, at in zip(weights, crossings, points, strict=True):
-        apart = at - mean
-        late = crossing.by_dead_time * jitter
-        covariance += weight * (inflation * crossing.covariance + np.outer(apart, apart) + np.outer(late, late))
+        noisy += weight * inflation * crossing.covariance
+        spread += weight * np.outer(at - mean, at - mean)
+        late += weight * np.outer(crossing.by_dead_time, crossing.by_dead_time) * jitter**2
     moved = np.array(
         [best.corrected.log_gain - best.crossing.log_gain, best.corrected.log_period - best.crossing.log_period]
     )
     share = explanation.misfit / swing if swing > 0 else 0.0
     # The period is known about twice as well as the gain, by misfit as by noise.
     own = np.array([FLOOR + MISFIT_WEIGHT * share, (FLOOR + MISFIT_WEIGHT * share) / 2])
-    covariance += np.diag(own**2 + (CORRECTION_WEIGHT * moved) ** 2)
-    return Combined(float(mean[0]), float(mean[1]), covariance)
+    unexplained = np.diag(own**2 + (CORRECTION_WEIGHT * moved) ** 2)
+    causes = {"noise": noisy, "structure": spread, "latency": late, "misfit": unexplained}
+    return Combined(
+        float(mean[0]),
+        float(mean[1]),
+        noisy + spread + late + unexplained,
+        {name: float(part[0, 0]) for name, part in causes.items()},
+    )
 
 
 def projected(best: Candidate, record: Record, cycles: Cycles) -> Combined:

@@ -48,7 +48,7 @@ BOUNDS: dict[str, tuple[Bounds, str]] = {
     ),
     "off_centre": (Bounds(0.10, 0.20), "The half-periods are unequal: a load holds the output off centre."),
     # The notes propose 0.005 / 0.02; the start alone gives 0.017 at the 95th percentile of the clean batch.
-    "drift": (Bounds(0.02, 0.06, "per cycle"), "The balance of the half-periods moves: the load drifts."),
+    "drift": (Bounds(0.02, 0.04, "per cycle"), "The balance of the half-periods moves: the load drifts."),
     "not_settled": (Bounds(0.03, 0.12), "Period or swing still change from cycle to cycle."),
     "swing_trend": (Bounds(0.02, 0.07, "per cycle"), "The swing grows or decays: the process's gain is changing."),
     "upset": (Bounds(0.0, 1.0, "cycles"), "Cycles unlike the others: something upset the test; leave them out."),
@@ -71,8 +71,10 @@ BOUNDS: dict[str, tuple[Bounds, str]] = {
     "jitter": (Bounds(1.2, 2.0), "The samples come unevenly."),
     "frozen": (Bounds(0.05, 0.15, "periods"), "The signal stood still while the process moved: look at the sensor."),
     "spikes": (Bounds(0.0, 2.0, "samples"), "The signal leaps out and back: look at the sensor and its wiring."),
+    # The notes propose 0.05 / 0.2; the relay's pull spreads the line, and what is seen of one of a third of the swing
+    # is 0.1 to 0.3. Healthy records of the batch show 0.
     "outside_oscillation": (
-        Bounds(0.05, 0.20, "of the test's power"),
+        Bounds(0.03, 0.10, "of the test's power"),
         "A regular oscillation that the relay does not make: find its source first.",
     ),
     "hidden_filter": (

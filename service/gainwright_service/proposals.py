@@ -190,6 +190,8 @@ def _analysed(
             reference=as_found.reference if as_found is not None else None,
             hysteresis=progress.hysteresis,
             latency_s=latency_s,
+            effect=1 if loop.output_effect == "raises" else -1,
+            commanded_amplitude=progress.amplitude or None,
         )
     except GainwrightError as error:
         return _nothing(str(error))

@@ -82,6 +82,17 @@ class Evidence:
         return float(np.median(np.diff(self.record.time)))
 
     @cached_property
+    def quiet_swing(self) -> float:
+        """The swing without its noise: of the fitted answer over the last scored cycle; as seen without a fit."""
+        if self.lead is None:
+            return self.swing
+        problem = self.lead.problem
+        edges = self.record.time[self.cycles.switches[self.cycles.scored[-2:]]]
+        inside = (problem.time >= edges[0]) & (problem.time <= edges[1])
+        fitted = (problem.value - self.lead.residual)[inside]
+        return float(np.ptp(fitted)) / 2 if fitted.size > 1 else self.swing
+
+    @cached_property
     def misfit_share(self) -> float:
         """Fit error beyond the noise, as a share of the swing."""
         if self.lead is None:

@@ -13,8 +13,9 @@ from gainwright.symptoms.evidence import Evidence
 SPIKE_SIGMAS = 8.0
 SPIKE_SHARE = 0.25
 """A spike is also this share of the swing at least."""
-LINE = 16.0
-"""A spectral line of the whitened residual stands out from this multiple of the mean power on."""
+LINE = 25.0
+"""A spectral line of the whitened residual stands out from this multiple of the median power on; the largest of a
+hundred lines of white noise lies near 8."""
 FROZEN_QUANTA = 3.0
 FROZEN_SIGMAS = 6.0
 
@@ -103,7 +104,9 @@ def _line(evidence: Evidence) -> float:
     if np.count_nonzero(kept) < 8:
         return 0.0
     place = int(np.flatnonzero(kept)[np.argmax(clear[kept])])
-    if clear[place] < LINE * float(np.mean(clear[kept])):
+    if clear[place] < LINE * float(np.median(clear[kept])):
         return 0.0
-    amplitude = 2.0 * np.sqrt(float(power[place])) / float(np.sum(window))
-    return float((amplitude / evidence.swing) ** 2)
+    # The line with its neighbours, which hold what the window spreads and what the relay's own pull blurs.
+    near = power[max(place - 2, 0) : place + 3]
+    squared = 4.0 * float(np.sum(near)) / float(np.sum(window)) ** 2 / 1.5
+    return squared / evidence.swing**2
