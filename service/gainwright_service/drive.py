@@ -25,6 +25,7 @@ class Seen:
     reading: Reading
     trip: Trip | None
     disobeyed: bool
+    strange: bool
 
 
 class Drive:
@@ -65,7 +66,7 @@ class Drive:
         self._newest_taken_at = reading.taken_at
         inspection = self._guard.inspect(reading, self._clock.monotonic_s())
         self._guard = inspection.guard
-        return Seen(reading, inspection.trip, inspection.disobeyed)
+        return Seen(reading, inspection.trip, inspection.disobeyed, inspection.strange)
 
     def overdue(self) -> Trip | None:
         """What time alone has broken."""
@@ -76,12 +77,13 @@ class Drive:
         self._check_permission()
         if facts.mode is not Mode.MANUAL:
             await self._adapter.take_over()
-        self._resting_output = facts.resting_output
-        now = self._clock.monotonic_s()
-        self._guard = self._guard.armed(
-            now=now, reference=facts.reference, resting_output=facts.resting_output, setpoint=facts.setpoint
-        )
+        self.resume(facts)
+        self._guard = self._guard.armed(facts, self._clock.monotonic_s())
         await self.beat()
+
+    def resume(self, facts: Facts) -> None:
+        """Know what the watchdog is to be armed with, as of a take-over that happened before."""
+        self._resting_output = facts.resting_output
 
     async def write_test(self, output: float) -> Trip | None:
         """Write a test output that the guard allows; the item it would break otherwise, and nothing is written."""
@@ -139,7 +141,11 @@ class Drive:
         self.commanded = output
         # Before the exchange too: a write that fails may have been taken, and its echo is nobody else's doing.
         self._guard = self._guard.wrote(output, started)
-        await self._adapter.write(output, urgent=urgent)
+        try:
+            await self._adapter.write(output, urgent=urgent)
+        except AdapterError:
+            self._guard = self._guard.unanswered(output)
+            raise
         ended = self._clock.monotonic_s()
         # The guard compares echoes only from readings taken after the write was answered.
         self._guard = self._guard.wrote(output, ended)

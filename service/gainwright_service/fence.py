@@ -13,6 +13,7 @@ from pathlib import Path
 from typing import IO, Protocol
 
 from sqlalchemy import text
+from sqlalchemy.exc import SQLAlchemyError
 from sqlalchemy.ext.asyncio import AsyncConnection, AsyncEngine
 
 from gainwright_service.errors import StoreError
@@ -122,7 +123,8 @@ class AdvisoryFence:
         )
         try:
             return bool(await self._connection.scalar(query, {"number": self._number}))
-        except StoreError:
+        except (StoreError, SQLAlchemyError, OSError):
+            # A lock that cannot be asked for is not known to be held, whatever broke.
             return False
 
     async def release(self) -> None:
@@ -133,7 +135,7 @@ class AdvisoryFence:
         try:
             await connection.execute(text("SELECT pg_advisory_unlock(:number)"), {"number": self._number})
             await connection.close()
-        except StoreError:
+        except (StoreError, SQLAlchemyError, OSError):
             # A broken connection has let the lock go already.
             await connection.invalidate()
 

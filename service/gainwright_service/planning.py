@@ -21,6 +21,8 @@ SMALLEST_AMPLITUDE = 0.01
 FIRST_WAIT_SAMPLES = 50
 """Samples without a crossing before the amplitude grows: people sample an oscillation 40 to 100 times a period."""
 RETURN_SAMPLES = 600
+LONGEST_RETURN_S = 300.0
+"""Well inside what the parent waits at its end, and what a last command stays valid for."""
 """Samples that the process variable is given to come back before the mode is restored."""
 
 
@@ -71,7 +73,7 @@ def plan_experiment(loop: Loop, request: StartExperiment) -> Plan:
             listening_samples=int(0.9 * wire.listening_s / interval_s),
             settle_s=max(1.0, 3 * interval_s),
             first_wait_s=max(1.0, FIRST_WAIT_SAMPLES * interval_s),
-            return_time_s=max(30.0, RETURN_SAMPLES * interval_s),
+            return_time_s=min(max(30.0, RETURN_SAMPLES * interval_s), LONGEST_RETURN_S),
         )
     except PlanRefusedByGuard as error:
         field, _, problem = str(error).partition(": ")

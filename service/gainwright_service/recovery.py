@@ -14,8 +14,9 @@ from typing import Any
 from gainwright_service.adapters.port import LoopAdapter
 from gainwright_service.clock import Clock
 from gainwright_service.drive import Drive
-from gainwright_service.errors import AdapterError
+from gainwright_service.errors import AdapterError, WriteWithheld
 from gainwright_service.experiment.commands import Command, HandBack, WriteExit
+from gainwright_service.experiment.events import WriteFailed
 from gainwright_service.experiment.guard import new_guard
 from gainwright_service.experiment.ownership import Ownership
 from gainwright_service.experiment.readings import Mode
@@ -58,11 +59,12 @@ async def recover(
     """
     owned = Ownership.from_document(ownership)
     plan, facts = owned.plan, owned.facts
-    if last_command_age_s > plan.exit_valid_s:
+    if not 0 <= last_command_age_s <= plan.exit_valid_s:
+        # A negative age is a stepped clock: how old the command is cannot be told.
         return Recovered(
             Outcome.INTERRUPTED,
             Exit.NOT_OURS,
-            f"the last command is {last_command_age_s:.0f} s old, above {plan.exit_valid_s:g} s: nothing was written",
+            f"the last command is {last_command_age_s:.0f} s old, not 0 to {plan.exit_valid_s:g} s: nothing written",
         )
     now = clock.monotonic_s()
     way_out = Return(
@@ -77,14 +79,18 @@ async def recover(
         read_first=True,
     )
     drive = Drive(adapter, new_guard(plan, now), clock, permitted=permitted)
+    drive.resume(facts)
     ending: Ending | None = None
     while ending is None:
         ending = await _one_step(way_out, drive, clock)
         if ending is None:
             await clock.sleep_until(clock.monotonic_s() + plan.sample_interval_s)
     detail = ending.detail
-    if ending.exit is Exit.VERIFIED and not await drive.disarm():
-        detail += "; the device's watchdog could not be disarmed"
+    settled = ending.exit in (Exit.VERIFIED, Exit.NOT_OURS)
+    if settled and plan.watchdog_timeout_s is not None and not await drive.disarm():
+        detail += (
+            f"; the device's watchdog could not be disarmed and may move the output in {plan.watchdog_timeout_s:g} s"
+        )
     return Recovered(Outcome.INTERRUPTED, ending.exit, detail)
 
 
@@ -96,8 +102,14 @@ async def _one_step(way_out: Return, drive: Drive, clock: Clock) -> Ending | Non
         commands, ending = step(now, seen.reading)
         for command in commands:
             await _carry_out(command, drive)
-    except AdapterError:
-        _, ending = way_out.missed(clock.monotonic_s())
+        interval = way_out.plan.heartbeat_s
+        if ending is None and way_out.exit_asked and interval is not None and drive.beat_due(interval):
+            # The return may be longer than the watchdog's time; its own action must not fall into it.
+            await drive.beat()
+    except AdapterError as error:
+        now = clock.monotonic_s()
+        withheld = isinstance(error, WriteWithheld)
+        _, ending = way_out.failed(WriteFailed(now, error.detail, refused=False, withheld=withheld))
     return ending
 
 

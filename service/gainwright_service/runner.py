@@ -7,13 +7,14 @@ machine, by cancellation or by an error of our own, the exit path runs.
 from __future__ import annotations
 
 import asyncio
+import math
 from collections.abc import Callable
 from dataclasses import asdict, dataclass, field
 from typing import Any, Protocol
 
 from gainwright_service.clock import Clock
 from gainwright_service.drive import Drive
-from gainwright_service.errors import AdapterError, DeviceRefused, StoreError
+from gainwright_service.errors import AdapterError, DeviceRefused, StoreError, WriteWithheld
 from gainwright_service.experiment.commands import (
     Command,
     Disarm,
@@ -46,6 +47,7 @@ from gainwright_service.experiment.plan import Plan
 from gainwright_service.experiment.states import DRIVING, TESTING, Exit, Outcome, State
 
 PROGRESS_S = 0.5
+DISARM_TRIES = 5
 
 
 @dataclass(frozen=True, slots=True)
@@ -155,6 +157,8 @@ class _Runner:
         self._samples = 0
         self._progress_at = self._start
         self._repeated_at: float | None = None
+        self._posted: list[Event] = []
+        self._strange = False
         self._disarm_failed = False
 
     async def run(self) -> None:
@@ -163,14 +167,16 @@ class _Runner:
         while self._machine.state is not State.FINISHED:
             await self._clock.sleep_until(due, self._signals.wake)
             now = self._clock.monotonic_s()
-            for event in self._signals.take(now):
-                await self._dispatch(event)
+            self._posted += self._signals.take(now)
             if now >= due:
+                # Before what was asked for meanwhile: after a pause nothing is written on old knowledge.
                 await self._tick()
                 due += self._plan.sample_interval_s
                 behind = self._clock.monotonic_s() - due
                 if behind > 0:
                     due += self._plan.sample_interval_s * (behind // self._plan.sample_interval_s)
+            while self._posted and not self._strange:
+                await self._dispatch(self._posted.pop(0))
         self._report(self._clock.monotonic_s())
 
     async def leave(self, reason: str) -> None:
@@ -178,7 +184,11 @@ class _Runner:
         await self._dispatch(Interrupted(self._clock.monotonic_s(), reason))
         while self._machine.state is not State.FINISHED:
             await self._clock.sleep_until(self._clock.monotonic_s() + self._plan.sample_interval_s)
-            await self._tick()
+            try:
+                await self._tick()
+            except Exception as error:  # noqa: BLE001 - still the last resort: patience ends it, whatever keeps breaking
+                now = self._clock.monotonic_s()
+                await self._dispatch(WriteFailed(now, f"{type(error).__name__}: {error}", refused=False))
 
     def ended(self) -> Ended:
         """The result, once finished."""
@@ -216,15 +226,15 @@ class _Runner:
         except AdapterError as error:
             await self._missed(error)
             return
-        now = self._clock.monotonic_s()
-        if self._machine.state in DRIVING:
+        now, trip = self._clock.monotonic_s(), seen.trip
+        self._strange = seen.strange
+        if self._machine.state in DRIVING and trip is None and not seen.strange:
             await self._beat()
-        trip = seen.trip
         if trip is not None:
             await self._dispatch(SomebodyActed(now, trip) if trip.yields else Tripped(now, trip))
         elif seen.disobeyed and self._machine.state in TESTING:
             await self._disobeyed(now)
-        if trip is None or not trip.yields:
+        if not seen.strange and (trip is None or not trip.yields):
             await self._dispatch(Sampled(now, seen.reading))
         self._keep(seen.reading.taken_at, seen.reading.process_variable, seen.reading.controller_output)
         if now - self._progress_at >= PROGRESS_S:
@@ -282,7 +292,8 @@ class _Runner:
         try:
             return await self._perform(command)
         except AdapterError as error:
-            return WriteFailed(self._clock.monotonic_s(), error.detail, isinstance(error, DeviceRefused))
+            withheld = isinstance(error, WriteWithheld)
+            return WriteFailed(self._clock.monotonic_s(), error.detail, isinstance(error, DeviceRefused), withheld)
 
     async def _perform(self, command: Command) -> Event | None:
         drive, clock = self._drive, self._clock
@@ -303,10 +314,18 @@ class _Runner:
                 await drive.hand_back(mode)
                 return HandedBack(clock.monotonic_s())
             case Disarm():
-                self._disarm_failed = not await drive.disarm()
+                self._disarm_failed = not await self._disarmed()
             case Finish():
                 pass
         return None
+
+    async def _disarmed(self) -> bool:
+        """Whether the watchdog was disarmed, tried a few times: it moves no output."""
+        for _ in range(DISARM_TRIES):
+            if await self._drive.disarm():
+                return True
+            await self._clock.sleep_until(self._clock.monotonic_s() + self._plan.sample_interval_s)
+        return False
 
     async def _secure(self, facts: Facts) -> Event:
         ownership = Ownership.of(self._plan, facts)
@@ -321,6 +340,8 @@ class _Runner:
         commanded = self._drive.commanded
         if commanded is None:
             commanded = echo
+        if value is not None and not math.isfinite(value):
+            value = None
         self._log.sample(RunSample(at - self._start, value, echo, commanded, self._machine.phase.value))
         self._samples += 1
 

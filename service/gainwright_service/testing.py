@@ -90,7 +90,7 @@ async def _check(adapter: LoopAdapter, clock: Clock, step: float, span: float, d
         await adapter.hand_back(found.mode, urgent=True)
         back = await _until(adapter, clock, lambda r: r.mode is found.mode)
         done.append(Check("the mode as found comes back", back.mode is found.mode, str(back.mode)))
-        jump = abs((back.controller_output or resting) - resting)
+        jump = abs((resting if back.controller_output is None else back.controller_output) - resting)
         smooth = jump <= 0.02 * span or facts.integral_follows_in_manual is not True
         done.append(Check("the integral follows as declared", smooth, f"the output moves by {jump:.3g}"))
 

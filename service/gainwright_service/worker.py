@@ -7,7 +7,6 @@ of one event loop. Knows no web framework. Analyses go to processes of their own
 from __future__ import annotations
 
 import asyncio
-from collections.abc import Callable
 from dataclasses import replace
 from typing import Any
 
@@ -20,14 +19,14 @@ from gainwright_service.clock import Clock
 from gainwright_service.drive import Drive
 from gainwright_service.errors import LockLost, ServiceError, StoreError
 from gainwright_service.experiment.guard import new_guard
-from gainwright_service.experiment.ownership import Ownership
-from gainwright_service.fence import PATIENCE_S, Fence, silent_from
+from gainwright_service.fence import PATIENCE_S, Fence
 from gainwright_service.gains_found import gains_found
 from gainwright_service.planning import plan_experiment
 from gainwright_service.proposals import conclude_experiment
 from gainwright_service.recovery import recover
 from gainwright_service.runner import Ended, Signals, run_experiment
-from gainwright_service.store import samples, sign_offs, sites, tasks, work
+from gainwright_service.site_lock import SiteLock, longest_exit_s
+from gainwright_service.store import samples, sign_offs, tasks, work
 from gainwright_service.store.connect import writing
 from gainwright_service.writer import Writer
 from gainwright_wire.loops import Loop
@@ -67,20 +66,26 @@ class Worker:
         ended_worker: str = "",
     ) -> None:
         self._engine = engine
-        self._fence = fence
         self._clock = clock
         self._pool = pool
         self._site = site
         self._name = name
-        self._ended_worker = ended_worker
         self._log = log
         self._links = Links()
         self._writer = Writer(engine, clock, site=site, worker=name, on_lost=self._lost)
         self._running: dict[str, tuple[asyncio.Task[None], Signals]] = {}
         self._stopped: set[str] = set()
         self._ending = asyncio.Event()
-        self._lost_lock = False
-        self._confirmed_at = clock.monotonic_s()
+        self._lock = SiteLock(
+            engine,
+            fence,
+            clock,
+            site=site,
+            name=name,
+            ending=self._ending,
+            log=log,
+            ended_worker=ended_worker,
+        )
 
     def end(self) -> None:
         """Begin the end: every experiment takes its exit path."""
@@ -90,13 +95,15 @@ class Worker:
 
     async def run(self) -> None:
         """Serve the site until the end is asked for or its lock is lost."""
-        if not await self._take_site():
+        if not await self._lock.take():
             return
         writing_task = asyncio.create_task(self._writer.run(), name="writer")
-        fence_task = asyncio.create_task(self._keep_fence(), name="fence")
+        fence_task = asyncio.create_task(self._lock.keep(), name="fence")
         try:
             await self._recover_all()
             while not self._ending.is_set():
+                if writing_task.done() or fence_task.done():
+                    self._unguarded()
                 await self._look()
                 await self._clock.sleep_until(self._clock.monotonic_s() + POLL_S, self._ending)
             await asyncio.gather(*(task for task, _ in self._running.values()), return_exceptions=True)
@@ -105,59 +112,14 @@ class Worker:
                 task.cancel()
             await asyncio.gather(writing_task, fence_task, return_exceptions=True)
             self._links.close()
-            await self._let_go()
+            await self._lock.let_go()
 
-    async def _take_site(self) -> bool:
-        """Wait for the site's lock, then wait out a holder that may still be writing (design, section 7)."""
-        while not await self._fence.take():
-            if self._ending.is_set():
-                return False
-            await self._clock.sleep_until(self._clock.monotonic_s() + FENCE_S, self._ending)
-        await self._wait_out_the_last_holder()
-        self._confirmed_at = self._clock.monotonic_s()
-        async with writing(self._engine) as connection:
-            await sites.confirm(connection, self._site, self._name, self._clock.wall_time().timestamp())
-        self._log.info("site taken", site=self._site, worker=self._name)
-        return True
-
-    async def _wait_out_the_last_holder(self) -> None:
-        """Until a worker that may live on without its lock writes nothing any more (design, section 7)."""
-        if self._engine.dialect.name == "sqlite":
-            return
-        async with self._engine.connect() as connection:
-            last = await sites.last_holder(connection, self._site)
-            left_driven = await work.left_running(connection, self._site)
-        longest = max((_longest_exit_s(row["ownership"]) for row in left_driven), default=0.0)
-        over_at = silent_from(last, longest_exit_s=longest, ended_worker=self._ended_worker)
-        while (left := over_at - self._clock.wall_time().timestamp()) > 0 and not self._ending.is_set():
-            self._log.info("waiting out the last holder", site=self._site, seconds=round(left, 1))
-            await self._clock.sleep_until(self._clock.monotonic_s() + left, self._ending)
-
-    def _permission(self, longest_exit_s: float) -> Callable[[], bool]:
-        """Whether the last confirmation of the site's lock still covers a way out of this length."""
-        return lambda: self._clock.monotonic_s() - self._confirmed_at <= PATIENCE_S + longest_exit_s
-
-    async def _let_go(self) -> None:
-        try:
-            if not self._lost_lock:
-                async with writing(self._engine) as connection:
-                    await sites.release(connection, self._site, self._name)
-        except StoreError as error:
-            self._log.warning("the site's release could not be stored", detail=error.detail)
-        await self._fence.release()
-
-    async def _keep_fence(self) -> None:
-        """Confirm the lock each second; beyond patience every experiment takes its exit path."""
-        while True:
-            await self._clock.sleep_until(self._clock.monotonic_s() + FENCE_S)
-            if await self._fence.held():
-                self._confirmed_at = self._clock.monotonic_s()
-            elif self._clock.monotonic_s() - self._confirmed_at > PATIENCE_S:
-                self._log.error("the site's lock is lost", site=self._site)
-                self._lost_lock = True
-                self._lost()
-                self._ending.set()
-                return
+    def _unguarded(self) -> None:
+        """Whoever kept the lock or wrote to the store is gone: nothing may be driven without them."""
+        self._log.error("the site's lock is lost, or its writer has ended", site=self._site)
+        self._lock.lost = True
+        self._lost()
+        self._ending.set()
 
     def _lost(self) -> None:
         for _, signals in self._running.values():
@@ -191,9 +153,17 @@ class Worker:
         if row["stop_requested_by"]:
             self._stopped.add(row["id"])
             signals.request_stop(row["stop_requested_by"])
-        task = asyncio.create_task(self._experiment(row, signals), name=f"experiment {row['tag']}")
+        task = asyncio.create_task(self._experiment_or_told(row, signals), name=f"experiment {row['tag']}")
         self._running[row["id"]] = (task, signals)
         task.add_done_callback(lambda _: self._running.pop(row["id"], None))
+
+    async def _experiment_or_told(self, row: dict[str, Any], signals: Signals) -> None:
+        """One experiment; an error of our own outside its runner does not leave its task running for ever."""
+        try:
+            await self._experiment(row, signals)
+        except Exception as error:  # noqa: BLE001 - the runner has its own last resort; this one closes the task
+            self._log.error("the experiment's task failed", task=row["id"], detail=f"{type(error).__name__}: {error}")
+            await self._ended_unverified(row, f"{type(error).__name__}: {error}: look at the loop")
 
     async def _experiment(self, row: dict[str, Any], signals: Signals) -> None:
         loop = Loop.model_validate(row["loop"])
@@ -208,7 +178,7 @@ class Worker:
         log = self._writer.log_of(row["id"])
         log.notes["plan"] = plan.document()
         gains = await gains_found(adapter)
-        permitted = self._permission(plan.longest_exit_s)
+        permitted = self._lock.permission(plan.longest_exit_s)
         drive = Drive(adapter, new_guard(plan, self._clock.monotonic_s()), self._clock, permitted=permitted)
         ended = await run_experiment(plan=plan, drive=drive, log=log, signals=signals, clock=self._clock)
         if ended.as_found is not None:
@@ -239,9 +209,17 @@ class Worker:
 
     async def _concluded(self, row: dict[str, Any], ended: Ended, plan: dict[str, Any]) -> dict[str, Any] | None:
         """The analysis and the checklist, from a process of their own."""
-        async with self._engine.connect() as connection:
-            whole = await samples.columns(connection, row["id"])
-            signed = await sign_offs.of_tasks(connection, [row["id"]])
+        kept: dict[str, Any] = {}
+
+        async def load() -> None:
+            async with self._engine.connect() as connection:
+                kept["whole"] = await samples.columns(connection, row["id"])
+                kept["signed"] = await sign_offs.of_tasks(connection, [row["id"]])
+
+        await self._until_stored(load)
+        if not kept:
+            return None
+        whole, signed = kept["whole"], kept["signed"]
         facts = {
             "loop": row["loop"],
             "request": row["request"],
@@ -292,7 +270,32 @@ class Worker:
         """Give back what a worker that is no more left driven, before anything new is claimed."""
         async with writing(self._engine) as connection:
             rows = await work.adopt(connection, site=self._site, worker=self._name)
-        await asyncio.gather(*(self._recover(dict(row)) for row in rows))
+        await asyncio.gather(*(self._recovered_or_told(dict(row)) for row in rows))
+
+    async def _recovered_or_told(self, row: dict[str, Any]) -> None:
+        """One task's recovery; an error of our own ends it unverified and leaves the others alone."""
+        try:
+            await self._recover(row)
+        except Exception as error:  # noqa: BLE001 - the last resort of a task that would block its site for ever
+            self._log.error("recovery failed", task=row["id"], detail=f"{type(error).__name__}: {error}")
+            detail = f"recovery failed ({type(error).__name__}: {error}): look at the loop"
+            await self._ended_unverified(row, detail)
+
+    async def _ended_unverified(self, row: dict[str, Any], detail: str) -> None:
+        async def store() -> None:
+            async with writing(self._engine) as connection:
+                await work.end(
+                    connection,
+                    row,
+                    worker=self._name,
+                    at=self._at(),
+                    outcome="interrupted",
+                    exit="unverified",
+                    exit_detail=detail,
+                )
+                await work.finish(connection, row["id"], worker=self._name, at=self._at(), result=None)
+
+        await self._until_stored(store)
 
     async def _recover(self, row: dict[str, Any]) -> None:
         loop = Loop.model_validate(row["loop"])
@@ -308,7 +311,7 @@ class Worker:
                 last_command_age_s=age_s,
                 adapter=open_adapter(loop, self._links, self._clock),
                 clock=self._clock,
-                permitted=self._permission(_longest_exit_s(row["ownership"])),
+                permitted=self._lock.permission(longest_exit_s(row["ownership"])),
             )
             outcome, exit, detail = found.outcome.value, found.exit.value, found.exit_detail
         self._log.info("experiment recovered", task=row["id"], exit=exit, detail=detail)
@@ -339,7 +342,3 @@ class Worker:
 
     def _at(self) -> str:
         return self._clock.wall_time().isoformat(timespec="milliseconds")
-
-
-def _longest_exit_s(ownership: dict[str, Any] | None) -> float:
-    return Ownership.from_document(ownership).plan.longest_exit_s if ownership else 0.0

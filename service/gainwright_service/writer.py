@@ -16,12 +16,12 @@ from sqlalchemy.ext.asyncio import AsyncEngine
 
 from gainwright_service.clock import Clock
 from gainwright_service.errors import LockLost, StoreError
+from gainwright_service.fence import PATIENCE_S
 from gainwright_service.runner import RunSample
 from gainwright_service.store import samples, sites, work
 from gainwright_service.store.connect import appending, writing
 
 PERIOD_S = 0.25
-LOST_AFTER_S = 5.0
 CONFIRM_S = 1.0
 MOST_BUFFERED = 200_000
 """Samples of one experiment that wait for a store that does not answer; beyond, the oldest are given up."""
@@ -132,11 +132,13 @@ class Writer:
             await self._clock.sleep_until(self._clock.monotonic_s() + PERIOD_S, self._hurry)
             self._hurry.clear()
             try:
-                await self.drain()
+                # A database that hangs is one that does not answer.
+                async with asyncio.timeout(PATIENCE_S):
+                    await self.drain()
             except LockLost:
                 self._on_lost()
-            except StoreError:
-                if self._clock.monotonic_s() - self._written_at > LOST_AFTER_S:
+            except (StoreError, TimeoutError):
+                if self._clock.monotonic_s() - self._written_at > PATIENCE_S:
                     self._on_lost()
 
     async def drain(self) -> None:

@@ -64,12 +64,12 @@ def machine_in(state: State) -> Machine:
         now += 0.1
         machine.handle(event_of(Sampled, now, 60.0 + 0.001 * (round(now * 10) % 3)))
     steps: dict[State, list[type[Event]]] = {
-        State.TAKING_OVER: [Secured],
-        State.PROBING: [Secured, TookOver],
-        State.SWINGING: [Secured, TookOver],
-        State.RETURNING: [Secured, TookOver, StopRequested],
-        State.RESTORING: [Secured, TookOver, StopRequested],
-        State.FINISHED: [Secured, TookOver, SomebodyActed],
+        State.TAKING_OVER: [Secured, Sampled],
+        State.PROBING: [Secured, Sampled, TookOver],
+        State.SWINGING: [Secured, Sampled, TookOver],
+        State.RETURNING: [Secured, Sampled, TookOver, StopRequested],
+        State.RESTORING: [Secured, Sampled, TookOver, StopRequested],
+        State.FINISHED: [Secured, Sampled, TookOver, SomebodyActed],
     }
     if state is State.LISTENING:
         return Machine(PLAN_FAST, 0.0)

@@ -5,6 +5,7 @@ Owns which registers are read together and what they mean to the port. Knows no 
 
 from __future__ import annotations
 
+import math
 from collections.abc import Awaitable, Callable, Sequence
 from dataclasses import dataclass
 
@@ -98,10 +99,7 @@ class ModbusAdapter:
                 taken_at = (began + self._clock.monotonic_s()) / 2
             for k, word in enumerate(registers):
                 words[block.table, block.address + k] = word
-        value = self._value("process_variable", self._adapter.process_variable, words)
-        low, high, span = self._range.low, self._range.high, self._range.span
-        if not low - FAR_OUTSIDE * span <= value <= high + FAR_OUTSIDE * span:
-            raise DeviceNonsensical(f"process_variable: {value:g} lies far outside {low:g} to {high:g}")
+        value, quality = self._measured(words)
         setpoint = self._adapter.setpoint
         return Reading(
             process_variable=value,
@@ -109,9 +107,20 @@ class ModbusAdapter:
             setpoint=None if setpoint is None else self._value("setpoint", setpoint, words),
             mode=_mode(self._adapter.mode, words),
             output_limited=None,
-            quality=Quality.GOOD if low <= value <= high else Quality.UNCERTAIN,
+            quality=quality,
             taken_at=taken_at,
         )
+
+    def _measured(self, words: dict[tuple[str, int], int]) -> tuple[float, Quality]:
+        """The process variable and its quality; an impossible one is bad, and hides neither echo nor mode."""
+        low, high, span = self._range.low, self._range.high, self._range.span
+        try:
+            value = self._value("process_variable", self._adapter.process_variable, words)
+        except DeviceNonsensical:
+            return math.nan, Quality.BAD
+        if not low - FAR_OUTSIDE * span <= value <= high + FAR_OUTSIDE * span:
+            return value, Quality.BAD
+        return value, Quality.GOOD if low <= value <= high else Quality.UNCERTAIN
 
     async def write(self, output: float, *, urgent: bool = False) -> None:
         """Write the output's register."""

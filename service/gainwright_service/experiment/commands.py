@@ -28,6 +28,7 @@ class Facts:
     drift_per_s: float
     hysteresis: float
     exit_output: float
+    longest_still: int = 1
 
 
 @dataclass(frozen=True, slots=True)

@@ -101,10 +101,11 @@ class TookOver(Event):
 
 @dataclass(frozen=True, slots=True)
 class WriteFailed(Event):
-    """A changing verb failed; whether the device took it is unknown."""
+    """A changing verb failed; whether the device took it is unknown, unless it was withheld and never sent."""
 
     reason: str
     refused: bool
+    withheld: bool = False
 
 
 @dataclass(frozen=True, slots=True)

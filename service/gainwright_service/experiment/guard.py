@@ -9,6 +9,7 @@ from __future__ import annotations
 
 from dataclasses import dataclass, replace
 
+from gainwright_service.experiment.commands import Facts
 from gainwright_service.experiment.events import Trip
 from gainwright_service.experiment.plan import Plan
 from gainwright_service.experiment.readings import Mode, Reading
@@ -16,13 +17,18 @@ from gainwright_service.experiment.readings import Mode, Reading
 HARD_DEVIATION = 1.2
 """D1 ends at once beyond this multiple of the allowed deviation, else on two samples in a row."""
 CONSECUTIVE = 2
-LATEST_FACTOR = 3.0
-"""D8: a half-period may last this many times the last one of the same direction."""
+MOST_UNSURE = 4
+STILL_FACTOR, STILL_SAMPLES = 6, 30
+"""D13: a signal frozen for this many times the longest standstill of the baseline, and this many samples more."""
 
 
 @dataclass(frozen=True, slots=True)
 class Watch:
-    """What the guard remembers between samples."""
+    """What the guard remembers between samples.
+
+    ``in_force`` is the output last seen to be ours: until a write is echoed, the device may stand anywhere between it
+    and what was commanded. ``unsure`` are outputs whose write was never answered and which may still land.
+    """
 
     since: float
     newest_good_at: float
@@ -33,7 +39,12 @@ class Watch:
     mode: Mode = Mode.MANUAL
     commanded: float | None = None
     commanded_at: float = 0.0
-    matched: bool = False
+    in_force: float | None = None
+    unmatched_since: float | None = None
+    unsure: tuple[float, ...] = ()
+    newest_value: float | None = None
+    still: int = 0
+    still_bound: int | None = None
     strange_outputs: int = 0
     strange_modes: int = 0
     strange_setpoints: int = 0
@@ -45,11 +56,15 @@ class Watch:
 
 @dataclass(frozen=True, slots=True)
 class Inspection:
-    """What a look at the loop says: the guard to use from now on, and what was met, if anything."""
+    """What a look at the loop says: the guard to use from now on, and what was met, if anything.
+
+    ``strange`` is a first sign of somebody else: until the next sample tells, nothing is written.
+    """
 
     guard: Guard
     trip: Trip | None = None
     disobeyed: bool = False
+    strange: bool = False
 
 
 @dataclass(frozen=True, slots=True)
@@ -59,15 +74,20 @@ class Guard:
     plan: Plan
     watch: Watch
 
-    def armed(self, *, now: float, reference: float, resting_output: float, setpoint: float | None) -> Guard:
+    def armed(self, facts: Facts, now: float) -> Guard:
         """The guard from the moment the loop is taken over in manual."""
         watch = replace(
             self.watch,
             armed=True,
-            reference=reference,
-            resting_output=resting_output,
-            setpoint=setpoint,
+            reference=facts.reference,
+            resting_output=facts.resting_output,
+            setpoint=facts.setpoint,
             mode=Mode.MANUAL,
+            # A controller in automatic may have moved the output since: any start is its own.
+            in_force=facts.controller_output if facts.mode is Mode.MANUAL else None,
+            unmatched_since=now,
+            still_bound=STILL_FACTOR * facts.longest_still + STILL_SAMPLES,
+            still=0,
             strange_outputs=0,
             strange_modes=0,
             strange_setpoints=0,
@@ -77,9 +97,15 @@ class Guard:
         return replace(self, watch=watch)
 
     def wrote(self, output: float, now: float) -> Guard:
-        """The guard after an output was written."""
-        watch = replace(self.watch, commanded=output, commanded_at=now, matched=False, strange_outputs=0)
+        """The guard after an output was written, or is about to be."""
+        since = self.watch.unmatched_since
+        watch = replace(self.watch, commanded=output, commanded_at=now, unmatched_since=now if since is None else since)
         return replace(self, watch=watch)
+
+    def unanswered(self, output: float) -> Guard:
+        """The guard after a write that nobody answered: it may have been taken, or may land late."""
+        unsure = (*self.watch.unsure, output)[-MOST_UNSURE:]
+        return replace(self, watch=replace(self.watch, unsure=unsure))
 
     def switched(self, now: float, half_limit_s: float | None) -> Guard:
         """The guard after a switch; ``half_limit_s`` bounds the half-period that begins."""
@@ -118,16 +144,25 @@ class Guard:
 
     def inspect(self, reading: Reading, now: float) -> Inspection:
         """Judge one reading. A person acting comes first, then the hard limits, the deviation, time and switches."""
-        guard, yielded, disobeyed = self._ownership(reading, now)
+        guard, yielded, disobeyed, strange = self._ownership(reading, now)
         if yielded is not None:
             return Inspection(guard, yielded)
+        gap = reading.taken_at - self.watch.newest_good_at
+        paused = self.watch.armed and gap > self.plan.stale_after_s
         if reading.usable:
             guard = replace(guard, watch=replace(guard.watch, newest_good_at=reading.taken_at))
-            guard, trip = guard._process_variable(reading)
-            if trip is not None:
-                return Inspection(guard, trip)
-        trip = guard.overdue(now)
-        return Inspection(guard, trip, disobeyed)
+        if strange:
+            # A limit on this very sample is met again on the next one; a person and a limit at once: yielding wins.
+            return Inspection(guard, strange=True)
+        if paused:
+            # Nobody watched for so long: what is found now is read before anything is written.
+            trip = Trip("D7", gap, self.plan.stale_after_s, "s", "no good reading for too long", link=True)
+            return Inspection(guard, trip)
+        if reading.usable:
+            guard, met = guard._process_variable(reading)
+            if met is not None:
+                return Inspection(guard, met)
+        return Inspection(guard, guard.overdue(now), disobeyed)
 
     def overdue(self, now: float) -> Trip | None:
         """What time alone has broken: staleness (D7), half-period (D8), total time and switches (D9)."""
@@ -157,44 +192,58 @@ class Guard:
         deviation = value - self.watch.reference
         bound = plan.deviation_up if deviation >= 0 else plan.deviation_down
         size = abs(deviation)
+        still = self.watch.still + 1 if value == self.watch.newest_value else 0
+        bound_still = self.watch.still_bound
+        if bound_still is not None and still > bound_still:
+            return self, Trip("D13", still, bound_still, "samples", "the process variable stands still: frozen signal")
         beyond = self.watch.beyond + 1 if size > bound else 0
-        guard = replace(self, watch=replace(self.watch, beyond=beyond))
+        guard = replace(self, watch=replace(self.watch, beyond=beyond, still=still, newest_value=value))
         if size > HARD_DEVIATION * bound or beyond >= CONSECUTIVE:
             return guard, Trip("D1", size, bound, "", "the process variable deviates too far from the reference")
         return guard, None
 
-    def _ownership(self, reading: Reading, now: float) -> tuple[Guard, Trip | None, bool]:
-        """Whose the output is (D6): mode, echo and setpoint, each on two samples in a row."""
-        watch, plan = self.watch, self.plan
+    def _ownership(self, reading: Reading, now: float) -> tuple[Guard, Trip | None, bool, bool]:
+        """Whose the output is (D6): mode, echo and setpoint, each on two samples in a row; whether the device disobeys;
+        whether there is a first sign of somebody else."""
+        watch = self.watch
         if not watch.armed:
-            return self, None, False
+            return self, None, False, False
+        watch, disobeyed = self._echoed(reading, now)
         strange_modes = watch.strange_modes + 1 if reading.mode not in (watch.mode, Mode.UNKNOWN) else 0
         strange_setpoints = watch.strange_setpoints + 1 if self._setpoint_moved(reading) else 0
-        echo, commanded = reading.controller_output, watch.commanded
-        matched, strange_outputs, disobeyed = watch.matched, 0, False
-        if echo is not None and commanded is not None and reading.taken_at >= watch.commanded_at:
-            if abs(echo - commanded) <= plan.echo_tolerance:
-                matched = True
-            elif matched:
-                strange_outputs = watch.strange_outputs + 1
-            else:
-                disobeyed = now - watch.commanded_at > plan.settle_s
-        watch = replace(
-            watch,
-            matched=matched,
-            strange_modes=strange_modes,
-            strange_setpoints=strange_setpoints,
-            strange_outputs=strange_outputs,
-        )
+        watch = replace(watch, strange_modes=strange_modes, strange_setpoints=strange_setpoints)
         guard = replace(self, watch=watch)
-        for count, what, number, bound in (
+        echo = reading.controller_output or 0.0
+        signs = (
             (strange_modes, "the mode was changed", 0.0, 0.0),
-            (strange_outputs, "the output was changed", echo or 0.0, commanded or 0.0),
+            (watch.strange_outputs, "the output was changed", echo, watch.commanded or 0.0),
             (strange_setpoints, "the setpoint was changed", reading.setpoint or 0.0, watch.setpoint or 0.0),
-        ):
+        )
+        for count, what, number, bound in signs:
             if count >= CONSECUTIVE:
-                return guard, Trip("D6", number, bound, "", f"somebody else acts: {what}", yields=True), False
-        return guard, None, disobeyed
+                trip = Trip("D6", number, bound, "", f"somebody else acts: {what}", yields=True)
+                return guard, trip, False, False
+        return guard, None, disobeyed, any(count for count, *_ in signs)
+
+    def _echoed(self, reading: Reading, now: float) -> tuple[Watch, bool]:
+        """The watch after an echo, and whether the device disobeys.
+
+        Between the output last in force and the commanded one the device may still be on its way, or be clamped;
+        outside of both it was somebody else, unless it is a write of ours that nobody answered and that landed late.
+        """
+        watch, tolerance = self.watch, self.plan.echo_tolerance
+        echo, commanded = reading.controller_output, watch.commanded
+        if echo is None or commanded is None or reading.taken_at < watch.commanded_at:
+            return watch, False
+        if abs(echo - commanded) <= tolerance:
+            return replace(watch, in_force=commanded, unmatched_since=None, strange_outputs=0), False
+        since = watch.unmatched_since
+        in_force = commanded if since is None else echo if watch.in_force is None else watch.in_force
+        if min(in_force, commanded) - tolerance <= echo <= max(in_force, commanded) + tolerance:
+            return replace(watch, strange_outputs=0), since is not None and now - since > self.plan.settle_s
+        if any(abs(echo - level) <= tolerance for level in watch.unsure):
+            return replace(watch, strange_outputs=0), True
+        return replace(watch, strange_outputs=watch.strange_outputs + 1), False
 
     def _setpoint_moved(self, reading: Reading) -> bool:
         if self.plan.setpoint_follows or self.watch.setpoint is None or reading.setpoint is None:

@@ -21,6 +21,8 @@ SMALLEST_HYSTERESIS = 0.01
 """Share of the allowed deviation: the hysteresis of a noiseless loop."""
 AGREEMENT = 0.25
 """The setpoint is the reference in automatic when it agrees with the mean within this share of D."""
+RESTING_SHARE = 0.01
+"""Share of the output's span by which a resting output asked for may differ from the one found."""
 LARGEST_DRIFT = 0.5
 """Share of D by which a self-regulating baseline may move over the listening time."""
 
@@ -64,6 +66,13 @@ def listened(baseline: Baseline, plan: Plan) -> Facts | Trip:
         if not baseline.outputs:
             return Trip("B20", 0, 1, "", "the output cannot be read: give the resting output when starting")
         resting = math.fsum(baseline.outputs) / len(baseline.outputs)
+    elif baseline.outputs:
+        seen = math.fsum(baseline.outputs) / len(baseline.outputs)
+        if abs(resting - seen) > RESTING_SHARE * plan.output_span:
+            return Trip(
+                "B20", resting, seen, "",
+                "the resting output asked for is not the output found: leave it out, it is read from the loop",
+            )  # fmt: skip
     narrowest = min(plan.deviation_up, plan.deviation_down)
     hysteresis = max(HYSTERESIS_SIGMAS * noise, HYSTERESIS_QUANTA * quantum, SMALLEST_HYSTERESIS * narrowest)
     reference = plan.reference if plan.reference is not None else mean
@@ -86,8 +95,25 @@ def listened(baseline: Baseline, plan: Plan) -> Facts | Trip:
         drift_per_s=slope,
         hysteresis=hysteresis,
         exit_output=plan.exit_value if plan.exit_value is not None else resting,
+        longest_still=_longest_still(baseline.values),
     )
     return _refusal(found, plan, baseline, narrowest) or found
+
+
+def changed_since(found: Facts, reading: Reading, plan: Plan) -> str:
+    """What is no longer as it was found, in words; empty where nothing is."""
+    if reading.mode is not found.mode:
+        return f"the mode changed from {found.mode} to {reading.mode}"
+    moved = reading.controller_output is not None and (
+        abs(reading.controller_output - found.controller_output) > 2 * plan.echo_tolerance
+    )
+    if found.mode is Mode.MANUAL and moved:
+        return "the output was changed"
+    if not plan.setpoint_follows and found.setpoint is not None and reading.setpoint is not None:
+        span = plan.process_variable_high - plan.process_variable_low
+        if abs(reading.setpoint - found.setpoint) > 1e-5 * max(span, abs(found.setpoint)):
+            return "the setpoint was changed"
+    return ""
 
 
 def _moved_by_hand(baseline: Baseline, plan: Plan) -> Trip | None:
@@ -127,6 +153,12 @@ def _refusal(found: Facts, plan: Plan, baseline: Baseline, narrowest: float) -> 
             "found in automatic, and it is not proven that the controller's integral follows the output in manual: "
             "put the loop into manual, or prove and declare integral_follows_in_manual",
         )  # fmt: skip
+    if automatic and plan.exit_action == "as_found" and found.setpoint is None and plan.setpoint_follows is not False:
+        return Trip(
+            "B19", 0, 1, "",
+            "found in automatic, its setpoint cannot be read, and it is not declared that it stays in manual: put the "
+            "loop into manual, or declare setpoint_follows_in_manual",
+        )  # fmt: skip
     if found.mode is Mode.OTHER:
         return Trip("B20", 0, 1, "", "the loop is in a mode that cannot be restored: put it into manual or automatic")
     return None
@@ -140,6 +172,11 @@ def _trend(times: list[float], values: list[float]) -> tuple[float, float, float
     slope = math.fsum((t - mean_time) * (v - mean) for t, v in zip(times, values, strict=True)) / (spread or 1.0)
     residual = math.fsum((v - mean - slope * (t - mean_time)) ** 2 for t, v in zip(times, values, strict=True))
     return mean, slope, math.sqrt(residual / max(count - 2, 1))
+
+
+def _longest_still(values: list[float]) -> int:
+    """Longest run of equal values."""
+    return max(len(list(run)) for _, run in itertools.groupby(values))
 
 
 def _quantum(values: list[float]) -> float:

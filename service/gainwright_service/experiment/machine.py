@@ -26,8 +26,9 @@ from gainwright_service.experiment.events import (
     WriteFailed,
 )
 from gainwright_service.experiment.excitation import Excitation, starting
-from gainwright_service.experiment.listening import Baseline, listened
+from gainwright_service.experiment.listening import Baseline, changed_since, listened
 from gainwright_service.experiment.plan import Plan
+from gainwright_service.experiment.progress import told
 from gainwright_service.experiment.readings import Mode, Reading
 from gainwright_service.experiment.returning import Return, Step
 from gainwright_service.experiment.scoring import Half, Score
@@ -68,6 +69,7 @@ class Machine:
         self._listened_from = now
         self._baseline = Baseline()
         self._awaiting_secured = False
+        self._secured_at: float | None = None
         self._law: RelayLaw | None = None
         self._excitation: Excitation | None = None
         self._side = Side.UP
@@ -108,33 +110,21 @@ class Machine:
 
     def progress(self, now: float) -> dict[str, Any]:
         """What is known so far, under the wire's names."""
-        newest = self.score.cycles[-1] if self.score.cycles else None
-        excitation, facts = self._excitation, self.facts
-        gain = None
-        if newest is not None and newest.swing > 0:
-            gain = 4 * newest.up.amplitude / (3.141592653589793 * newest.swing)
-        return {
-            "elapsed_s": max(now - self._began_at, 0.0),
-            "switches": self.switches,
-            "cycles": max(len(self.score.halves) - 1, 0) // 2,
-            "scored_cycles": len(self.score.cycles),
-            "amplitude": excitation.amplitude if excitation else None,
-            "hysteresis": facts.hysteresis if facts else None,
-            "noise": facts.noise if facts else None,
-            "reference": facts.reference if facts else None,
-            "resting_output": facts.resting_output if facts else None,
-            "swing": newest.swing if newest else None,
-            "period_s": newest.period if newest else None,
-            "provisional_ultimate_gain": gain,
-            "worst_deviation": self.worst_deviation,
-            "message": self.detail,
-        }
+        return told(
+            self.score,
+            self.facts,
+            self._excitation,
+            elapsed_s=max(now - self._began_at, 0.0),
+            switches=self.switches,
+            worst_deviation=self.worst_deviation,
+            message=self.detail,
+        )
 
     # Listening
 
     def _listen(self, event: Sampled) -> Commands:
         if self._awaiting_secured:
-            return ()
+            return self._take_over_unchanged(event)
         self._baseline.add(event.reading)
         enough = len(self._baseline.values) >= self.plan.listening_samples
         heard = event.now - self._listened_from
@@ -149,11 +139,24 @@ class Machine:
         self._awaiting_secured = True
         return (Secure(found),)
 
-    def _take_over(self, event: Secured) -> Commands:
+    def _secured(self, event: Secured) -> Commands:
         if self.facts is None:
             return self._astray(event)
+        self._secured_at = event.now
+        return ()
+
+    def _take_over_unchanged(self, event: Sampled) -> Commands:
+        """Take the loop over, once a reading newer than the stored facts shows it as it was found."""
+        facts, reading = self.facts, event.reading
+        if facts is None or self._secured_at is None or reading.taken_at < self._secured_at or not reading.usable:
+            return ()
+        changed = changed_since(facts, reading, self.plan)
+        if changed:
+            detail = f"nothing was moved: {changed} while the start was being stored"
+            self.limit = Trip("D6", 0.0, 0.0, "", changed, yields=True)
+            return self._finish(Outcome.YIELDED, Exit.NOT_WRITTEN, detail, disarm=False)
         self.state = State.TAKING_OVER
-        return (TakeOver(self.facts),)
+        return (TakeOver(facts),)
 
     def _begin(self, event: TookOver) -> Commands:
         if self.facts is None:
@@ -282,9 +285,12 @@ class Machine:
 
     def _leave_unwritten(self, event: WriteFailed) -> Commands:
         trip = Trip("D5", 0.0, 0.0, "", f"a write failed: {event.reason}", link=not event.refused)
-        return self._leave(event.now, Outcome.LIMITED if event.refused else Outcome.LOST, trip)
+        # Whether the loop was taken over at all is not known: it is read first.
+        taking = self.state is State.TAKING_OVER
+        outcome = Outcome.LIMITED if event.refused else Outcome.LOST
+        return self._leave(event.now, outcome, trip, read_first=taking)
 
-    def _leave(self, now: float, outcome: Outcome, trip: Trip | None) -> Commands:
+    def _leave(self, now: float, outcome: Outcome, trip: Trip | None, *, read_first: bool = False) -> Commands:
         if self.facts is None:
             return self._finish(outcome, Exit.NOT_WRITTEN, "nothing was moved", disarm=False)
         self.outcome, self.limit, self.state = outcome, trip, State.RETURNING
@@ -298,7 +304,8 @@ class Machine:
             levels=self.levels or (self.facts.resting_output, self.facts.controller_output),
             amplitude=self._excitation.amplitude if self._excitation else 0.0,
             restore=automatic and self.plan.exit_action == "as_found" and outcome is not Outcome.LOST,
-            read_first=trip is not None and trip.link,
+            read_first=read_first or (trip is not None and trip.link),
+            not_before=now,
         )
         return self._return.begin(now)
 
@@ -328,7 +335,7 @@ class Machine:
         return self._astray(event) if self._return is None else self._step(self._return.missed(event.now))
 
     def _exit_failed(self, event: WriteFailed) -> Commands:
-        return self._astray(event) if self._return is None else self._step(self._return.failed(event.now))
+        return self._astray(event) if self._return is None else self._step(self._return.failed(event))
 
     def _step(self, step: Step) -> Commands:
         commands, ending = step
@@ -341,7 +348,10 @@ class Machine:
 
     def _give_way(self, event: SomebodyActed) -> Commands:
         self.limit = event.trip
-        return self._finish(Outcome.YIELDED, Exit.NOT_WRITTEN, f"yielded: {event.trip.sentence}", disarm=True)
+        asked = self._return is not None and self._return.exit_asked
+        told = "; the exit had been asked for before" if asked else ""
+        ended = Exit.NOT_OURS if asked else Exit.NOT_WRITTEN
+        return self._finish(Outcome.YIELDED, ended, f"yielded: {event.trip.sentence}{told}", disarm=True)
 
     def _end_untouched_limited(self, event: Tripped) -> Commands:
         self.limit = event.trip

@@ -61,8 +61,9 @@ class Plan:
 
     @property
     def longest_exit_s(self) -> float:
-        """The longest that a way out may take: return, a lost link's patience, both proofs with their repeats."""
-        return self.return_time_s + self.link_patience_s + 4 * self.settle_s
+        """The longest that a way out may take: ramp, return, a lost link's patience, both proofs with their repeats."""
+        ramp = 0.0 if not self.output_rate_per_s else 2 * self.max_output_change / self.output_rate_per_s
+        return ramp + self.return_time_s + self.link_patience_s + 4 * self.settle_s
 
     def __post_init__(self) -> None:
         for field in fields(self):

@@ -32,7 +32,7 @@ class Reading:
     Parameters
     ----------
     process_variable : float, PV units
-        NaN is never returned: a nonsensical value raises.
+        NaN only with bad quality: an impossible value hides neither echo nor mode.
     controller_output : float or None, output units
         Echo of the register; None where the device has none.
     setpoint : float or None, PV units

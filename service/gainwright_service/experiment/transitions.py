@@ -66,7 +66,7 @@ TABLE: Mapping[State, Mapping[type[Event], str]] = {
         SomebodyActed: "end_untouched_yielded",
         StopRequested: "end_untouched_stopped",
         Interrupted: "end_untouched_interrupted",
-        Secured: "take_over",
+        Secured: "secured",
         NotSecured: "end_untouched_interrupted",
         TookOver: "astray",
         WriteFailed: "astray",
@@ -115,8 +115,8 @@ def handler_of(state: State, event: Event) -> str:
 
 
 GOES_TO: Mapping[str, tuple[State, ...]] = {
-    "listen": (State.LISTENING, State.FINISHED),
-    "take_over": (State.TAKING_OVER, State.FINISHED),
+    "listen": (State.LISTENING, State.TAKING_OVER, State.FINISHED),
+    "secured": (State.LISTENING, State.FINISHED),
     "begin": (State.PROBING, State.RETURNING, State.FINISHED),
     "swing": (State.PROBING, State.SWINGING, State.RETURNING),
     "leave_limited": (State.RETURNING,),

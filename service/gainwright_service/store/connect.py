@@ -22,6 +22,14 @@ from gainwright_service.errors import StoreUnavailable
 SERIAL_LOCK = 4_203_110_520
 """Advisory lock that puts PostgreSQL's journalled changes in a row, as SQLite's single writer does by itself."""
 BUSY_MS = 4000
+QUICK_TO_FAIL = {
+    "connect_timeout": 5,
+    "keepalives_idle": 2,
+    "keepalives_interval": 1,
+    "keepalives_count": 3,
+    "tcp_user_timeout": 5000,
+}
+"""A connection whose packets are lost fails within the worker's patience, not within the system's."""
 UNREACHABLE = (exc.OperationalError, exc.InterfaceError, exc.TimeoutError, exc.InternalError)
 
 
@@ -33,7 +41,9 @@ def open_engine(url: str) -> AsyncEngine:
     if url.startswith("postgresql://"):
         url = url.replace("postgresql://", "postgresql+psycopg://", 1)
     embedded = url.startswith("sqlite")
-    settings: dict[str, Any] = {} if embedded else {"pool_pre_ping": True, "pool_size": 10, "pool_timeout": 3}
+    settings: dict[str, Any] = {}
+    if not embedded:
+        settings = {"pool_pre_ping": True, "pool_size": 10, "pool_timeout": 3, "connect_args": QUICK_TO_FAIL}
     engine = create_async_engine(url, **settings)
     event.listen(engine.sync_engine, "handle_error", _translate)
     if embedded:
