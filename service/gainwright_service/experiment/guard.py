@@ -243,7 +243,16 @@ class Guard:
             return replace(watch, strange_outputs=0), since is not None and now - since > self.plan.settle_s
         if any(abs(echo - level) <= tolerance for level in watch.unsure):
             return replace(watch, strange_outputs=0), True
+        if self._by_watchdog(echo):
+            return replace(watch, strange_outputs=0), True
         return replace(watch, strange_outputs=watch.strange_outputs + 1), False
+
+    def _by_watchdog(self, echo: float) -> bool:
+        """Whether an output is where the device's own watchdog puts it."""
+        plan, watch = self.plan, self.watch
+        level = watch.resting_output if plan.watchdog == "resting" else plan.watchdog_value
+        declared = plan.watchdog in ("resting", "fixed") and level is not None
+        return declared and level is not None and abs(echo - level) <= plan.ownership_tolerance
 
     def _setpoint_moved(self, reading: Reading) -> bool:
         if self.plan.setpoint_follows or self.watch.setpoint is None or reading.setpoint is None:
