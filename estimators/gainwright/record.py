@@ -17,6 +17,8 @@ from gainwright.errors import MalformedRecord
 FloatArray = npt.NDArray[np.float64]
 
 MINIMUM_SAMPLES = 8
+LARGEST = 1e60
+"""Beyond this, and below its reciprocal, squares leave the range of numbers."""
 
 
 @dataclass(frozen=True, slots=True, eq=False)
@@ -60,6 +62,9 @@ class Record:
             where = int(np.argmax(steps <= 0)) + 1
             raise MalformedRecord("time", f"does not increase at sample {where}", "strictly increasing seconds")
         for name, column in columns.items():
+            largest, span = float(np.max(np.abs(column))), float(np.ptp(column))
+            if largest > LARGEST or 0 < span < 1 / LARGEST:
+                raise MalformedRecord(name, f"spans {span:.3g} about {largest:.3g}", "units in which it is near one")
             column.flags.writeable = False
             object.__setattr__(self, name, column)
 

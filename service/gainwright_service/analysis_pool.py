@@ -26,16 +26,12 @@ class AnalysisFailed(ServiceError):
 
 
 class AnalysisPool:
-    """Analyses in processes of their own.
+    """Analyses in a process of their own, one after the other."""
 
-    Parameters
-    ----------
-    processes : int
-    """
-
-    def __init__(self, processes: int = 1) -> None:
-        self._processes = processes
+    def __init__(self) -> None:
         self._pool: ProcessPoolExecutor | None = None
+        # As many as run at once: the clock of an analysis starts with it, and its end takes no other with it.
+        self._slot = asyncio.Lock()
 
     async def run(self, function: Callable[..., T], *arguments: Any) -> T:
         """Call ``function`` in an analysis process; its errors come back as they are.
@@ -44,17 +40,18 @@ class AnalysisPool:
         ------
         AnalysisFailed
         """
-        for _ in range(2):
-            pool = self._open()
-            try:
-                async with asyncio.timeout(LONGEST_S):
-                    return await asyncio.get_running_loop().run_in_executor(pool, function, *arguments)
-            except BrokenProcessPool:
-                self.close()
-            except TimeoutError as error:
-                self.close()
-                raise AnalysisFailed(f"the analysis took more than {LONGEST_S:g} s") from error
-        raise AnalysisFailed("the analysis process died twice")
+        async with self._slot:
+            for _ in range(2):
+                pool = self._open()
+                try:
+                    async with asyncio.timeout(LONGEST_S):
+                        return await asyncio.get_running_loop().run_in_executor(pool, function, *arguments)
+                except BrokenProcessPool:
+                    self.close()
+                except TimeoutError as error:
+                    self.close()
+                    raise AnalysisFailed(f"the analysis took more than {LONGEST_S:g} s") from error
+            raise AnalysisFailed("the analysis process died twice")
 
     def close(self) -> None:
         """End the processes."""
@@ -74,9 +71,7 @@ class AnalysisPool:
 
     def _open(self) -> ProcessPoolExecutor:
         if self._pool is None:
-            self._pool = ProcessPoolExecutor(
-                self._processes, mp_context=multiprocessing.get_context("spawn"), initializer=_begin
-            )
+            self._pool = ProcessPoolExecutor(1, mp_context=multiprocessing.get_context("spawn"), initializer=_begin)
         return self._pool
 
 

@@ -10,7 +10,7 @@ from typing import Any
 
 from sqlalchemy.ext.asyncio import AsyncConnection
 
-from gainwright_service.checklist import Start, assemble, blocking, measure_before
+from gainwright_service.checklist import ITEMS, Start, assemble, blocking, measure_before
 from gainwright_service.errors import ChecklistFailed, NoWorker
 from gainwright_service.forecasting import predict
 from gainwright_service.planning import check_start, plan_with_defaults
@@ -36,6 +36,7 @@ async def start_experiment(
     LoopBusy, GroupBusy, ExitNotAcknowledged
     """
     kept = await loops.get(connection, tag)
+    _refuse_unknown(request)
     await _require_worker(connection, kept.loop.site, now_s)
     last = last_analysis(await tasks.last_result(connection, tag))
     check_start(kept.loop, request, requested_by=by)
@@ -43,6 +44,18 @@ async def start_experiment(
     document = request.model_dump(mode="json")
     task_id = await tasks.create(connection, kind="experiment", loop=kept.loop, request=document, by=by, at=at)
     return await tasks.get(connection, task_id)
+
+
+def _refuse_unknown(request: StartExperiment) -> None:
+    """An answer to an item that does not exist would be lost, and with it what somebody meant by it."""
+    known = {item.id for item in ITEMS if item.id.startswith("B")}
+    wrong = tuple(
+        FieldProblem(field=f"answers.{item}", problem="no such item", allowed=", ".join(sorted(known)))
+        for item in request.answers
+        if item not in known
+    )
+    if wrong:
+        raise ChecklistFailed("; ".join(f"{w.field}: {w.problem}" for w in wrong), wrong)
 
 
 async def _require_worker(connection: AsyncConnection, site: str, now_s: float) -> None:

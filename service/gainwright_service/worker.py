@@ -8,6 +8,7 @@ from __future__ import annotations
 
 import asyncio
 from dataclasses import replace
+from datetime import datetime
 from typing import Any
 
 from sqlalchemy.ext.asyncio import AsyncEngine
@@ -17,7 +18,7 @@ from gainwright_service.adapters.links import Links
 from gainwright_service.analysis_pool import AnalysisPool
 from gainwright_service.clock import Clock
 from gainwright_service.drive import Drive
-from gainwright_service.errors import LockLost, ServiceError, StoreError
+from gainwright_service.errors import ChecklistFailed, LockLost, ServiceError, StoreError
 from gainwright_service.experiment.guard import new_guard
 from gainwright_service.fence import PATIENCE_S, Fence
 from gainwright_service.gains_found import gains_found
@@ -33,6 +34,8 @@ from gainwright_wire.loops import Loop
 from gainwright_wire.tasks import StartExperiment
 
 POLL_S = 0.25
+STALE_START_S = 30.0
+"""A start that waited longer for its worker is not run."""
 FENCE_S = 1.0
 
 
@@ -169,6 +172,11 @@ class Worker:
         loop = Loop.model_validate(row["loop"])
         request = StartExperiment.model_validate(row["request"])
         self._log.info("experiment claimed", task=row["id"], tag=row["tag"])
+        waited_s = (self._clock.wall_time() - datetime.fromisoformat(row["created_at"])).total_seconds()
+        if waited_s > STALE_START_S:
+            # Whoever asked may have gone home: attendance and answers are of their own time.
+            await self._refused(row, ChecklistFailed(f"the start waited {waited_s:.0f} s for a worker: ask again"))
+            return
         try:
             plan = plan_experiment(loop, request)
         except ServiceError as error:

@@ -7,16 +7,19 @@ from typing import Annotated
 from pydantic import BaseModel, ConfigDict, Field
 
 Finite = Annotated[float, Field(strict=True, allow_inf_nan=False, ge=-1e12, le=1e12)]
-Positive = Annotated[float, Field(strict=True, gt=0, allow_inf_nan=False, le=1e12)]
+Positive = Annotated[float, Field(strict=True, ge=1e-9, allow_inf_nan=False, le=1e12)]
 NonNegative = Annotated[float, Field(strict=True, ge=0, allow_inf_nan=False, le=1e12)]
 Flag = Annotated[bool, Field(strict=True)]
 """True or false, never a word that might mean either: what is declared here can hurt somebody."""
 Tag = Annotated[str, Field(pattern=r"^[A-Za-z0-9][A-Za-z0-9._-]{0,63}$", examples=["TIC-201"])]
 Site = Annotated[str, Field(pattern=r"^[a-z0-9][a-z0-9-]{0,31}$", examples=["local"])]
-_NO_NUL = r"^[^\x00]*$"
-"""PostgreSQL keeps no text with a NUL in it."""
-ShortText = Annotated[str, Field(max_length=200, pattern=_NO_NUL)]
-LongText = Annotated[str, Field(max_length=2000, pattern=_NO_NUL)]
+HIDDEN = r"\x7f-\x9f\u200b-\u200f\u202a-\u202e\u2060-\u2069\ufeff"
+"""Characters that nobody sees: they make two names look alike, or one text read as another."""
+_SEEN = rf"[^\x00-\x1f{HIDDEN}]"
+ShortText = Annotated[str, Field(max_length=200, pattern=rf"^{_SEEN}*$")]
+LongText = Annotated[str, Field(max_length=2000, pattern=rf"^[^\x00-\x08\x0b-\x1f{HIDDEN}]*$")]
+Stated = Annotated[str, Field(max_length=200, pattern=rf"^{_SEEN}*[\p{{L}}\p{{N}}]{_SEEN}*$")]
+"""A name or number that somebody stated: at least one letter or digit, nothing hidden."""
 
 
 class Wire(BaseModel):

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from collections.abc import Iterator
 from enum import StrEnum
 from typing import Annotated, Literal
 
@@ -10,7 +11,7 @@ from pydantic_core import PydanticCustomError
 
 from gainwright_wire.base import Finite, Flag, LongText, NonNegative, Positive, ShortText, Site, Tag, Wire
 
-Seconds = Annotated[float, Field(gt=0, le=86400, allow_inf_nan=False)]
+Seconds = Annotated[float, Field(strict=True, gt=0, le=86400, allow_inf_nan=False)]
 
 
 class LoopClass(StrEnum):
@@ -43,10 +44,10 @@ class Register(Wire):
     """One value in a Modbus device: raw * scale + offset."""
 
     table: Literal["input", "holding"]
-    address: Annotated[int, Field(ge=0, le=65535)]
+    address: Annotated[int, Field(strict=True, ge=0, le=65535)]
     format: Literal["float32", "int16", "uint16"] = "float32"
     word_order: Literal["big", "little"] = "big"
-    scale: Annotated[float, Field(allow_inf_nan=False, ge=-1e9, le=1e9)] = 1.0
+    scale: Annotated[float, Field(strict=True, allow_inf_nan=False, ge=-1e9, le=1e9)] = 1.0
     offset: Finite = 0.0
 
     @model_validator(mode="after")
@@ -62,10 +63,10 @@ class ModeRegister(Wire):
     """The register that selects manual or automatic, and the codes it uses."""
 
     table: Literal["holding"] = "holding"
-    address: Annotated[int, Field(ge=0, le=65535)]
-    manual: Annotated[int, Field(ge=0, le=65535)] = 0
-    automatic: Annotated[int, Field(ge=0, le=65535)] = 1
-    cascade: Annotated[int, Field(ge=0, le=65535)] | None = None
+    address: Annotated[int, Field(strict=True, ge=0, le=65535)]
+    manual: Annotated[int, Field(strict=True, ge=0, le=65535)] = 0
+    automatic: Annotated[int, Field(strict=True, ge=0, le=65535)] = 1
+    cascade: Annotated[int, Field(strict=True, ge=0, le=65535)] | None = None
 
     @model_validator(mode="after")
     def _distinct(self) -> ModeRegister:
@@ -88,10 +89,10 @@ class HeartbeatRegister(Wire):
     """The register that the test beats, and what the device does when the beats stop."""
 
     table: Literal["holding"] = "holding"
-    address: Annotated[int, Field(ge=0, le=65535)]
+    address: Annotated[int, Field(strict=True, ge=0, le=65535)]
     watchdog: WatchdogAction
     timeout_s: Seconds
-    resting_address: Annotated[int, Field(ge=0, le=65534)] | None = None
+    resting_address: Annotated[int, Field(strict=True, ge=0, le=65534)] | None = None
     """Where the device takes the resting output from (float32), for `resting`; None where it latches it itself."""
     fixed_value: Finite | None = None
 
@@ -115,9 +116,10 @@ class ModbusTcp(Wire):
 
     kind: Literal["modbus"]
     host: Annotated[str, Field(min_length=1, max_length=253, pattern=r"^[A-Za-z0-9.:_-]+$")]
-    port: Annotated[int, Field(ge=1, le=65535)] = 502
-    device_id: Annotated[int, Field(ge=0, le=255)] = 1
-    timeout_s: Annotated[float, Field(gt=0, le=1.0, allow_inf_nan=False)] = 0.5
+    port: Annotated[int, Field(strict=True, ge=1, le=65535)] = 502
+    device_id: Annotated[int, Field(strict=True, ge=1, le=255)] = 1
+    """0 is everybody on a gateway, and never a loop."""
+    timeout_s: Annotated[float, Field(strict=True, gt=0, le=1.0, allow_inf_nan=False)] = 0.5
     process_variable: Register
     controller_output: Register
     setpoint: Register | None = None
@@ -129,7 +131,35 @@ class ModbusTcp(Wire):
     def _writable(self) -> ModbusTcp:
         if self.controller_output.table != "holding":
             raise PydanticCustomError("output_table", "controller_output must be in the holding table to be written")
+        self._check_overlap()
         return self
+
+    def _check_overlap(self) -> None:
+        """No two registers that are written, and none of them and the process variable, share a word."""
+        found = [(name, table, first, words) for name, table, first, words in self._spans()]
+        for k, (name, table, first, words) in enumerate(found):
+            for other, other_table, other_first, other_words in found[k + 1 :]:
+                if table == other_table and first < other_first + other_words and other_first < first + words:
+                    raise PydanticCustomError(
+                        "registers_overlap",
+                        "{one} and {other} share a register: each needs its own",
+                        {"one": name, "other": other},
+                    )
+
+    def _spans(self) -> Iterator[tuple[str, str, int, int]]:
+        for name in ("process_variable", "controller_output"):
+            register: Register = getattr(self, name)
+            yield name, register.table, register.address, 2 if register.format == "float32" else 1
+        if self.mode is not None:
+            yield "mode", self.mode.table, self.mode.address, 1
+        if self.heartbeat is not None:
+            yield "heartbeat", self.heartbeat.table, self.heartbeat.address, 1
+            if self.heartbeat.resting_address is not None:
+                yield "heartbeat.resting_address", self.heartbeat.table, self.heartbeat.resting_address, 2
+        for name in ("gain", "integral", "derivative") if self.gains is not None else ():
+            gain: Register | None = getattr(self.gains, name)
+            if gain is not None:
+                yield f"gains.{name}", gain.table, gain.address, 2 if gain.format == "float32" else 1
 
 
 class SimulatedPlant(Wire):
@@ -141,7 +171,7 @@ class SimulatedPlant(Wire):
     dead_time_s: NonNegative = 0.0
     noise: NonNegative = 0.0
     quantum: NonNegative = 0.0
-    seed: Annotated[int, Field(ge=0, le=2**31 - 1)] = 0
+    seed: Annotated[int, Field(strict=True, ge=0, le=2**31 - 1)] = 0
     resting_output: Finite = 50.0
     resting_process_variable: Finite = 50.0
     starts_in: Literal["manual", "automatic"] = "manual"
@@ -163,10 +193,10 @@ class Limits(Wire):
     max_output_change: Positive | None = None
     output_rate_per_s: Positive | None = None
     max_duration_s: Seconds | None = None
-    max_switches: Annotated[int, Field(ge=4, le=1000)] | None = None
+    max_switches: Annotated[int, Field(strict=True, ge=4, le=1000)] | None = None
     min_dwell_s: NonNegative = 0.0
-    max_switches_per_hour: Annotated[int, Field(ge=4, le=100000)] | None = None
-    max_switches_per_day: Annotated[int, Field(ge=4, le=1000000)] | None = None
+    max_switches_per_hour: Annotated[int, Field(strict=True, ge=4, le=100000)] | None = None
+    max_switches_per_day: Annotated[int, Field(strict=True, ge=4, le=1000000)] | None = None
 
     @model_validator(mode="after")
     def _ordered(self) -> Limits:
@@ -201,7 +231,7 @@ class Controller(Wire):
     input_high: Finite | None = None
     output_low: Finite | None = None
     output_high: Finite | None = None
-    derivative_filter_n: Annotated[float, Field(ge=1, le=100, allow_inf_nan=False)] = 10.0
+    derivative_filter_n: Annotated[float, Field(strict=True, ge=1, le=100, allow_inf_nan=False)] = 10.0
     derivative_on: Literal["process_variable", "error"] = "process_variable"
     sample_interval_s: Seconds | None = None
 
@@ -240,13 +270,13 @@ class Loop(Wire):
     process_variable: Range
     controller_output: Range
     output_effect: Literal["raises", "lowers"]
-    sample_interval_s: Annotated[float, Field(ge=0.01, le=60, allow_inf_nan=False)] = 0.1
+    sample_interval_s: Annotated[float, Field(strict=True, ge=0.01, le=60, allow_inf_nan=False)] = 0.1
     limits: Limits
     exit_action: ExitAction
     integral_follows_in_manual: Flag | None = None
     setpoint_follows_in_manual: Flag | None = None
     attended_integrating_hold: Flag = False
-    interaction_groups: Annotated[tuple[ShortText, ...], Field(max_length=20)] = ()
+    interaction_groups: Annotated[tuple[Tag, ...], Field(max_length=20)] = ()
     witnesses: Annotated[tuple[Witness, ...], Field(max_length=20)] = ()
     controller: Controller | None = None
     notes: LongText = ""
@@ -259,6 +289,7 @@ class Loop(Wire):
                 "safety_function: a loop that is part of a safety function is never tested; there is no override",
             )
         self._check_limits()
+        self._check_unenforced()
         self._check_class()
         return self
 
@@ -293,10 +324,43 @@ class Loop(Wire):
                 "class_contradiction",
                 "adapter.mode: class 'plant' needs a mode register; a loop without one is allowed on 'bench' only",
             )
-        beat = adapter.heartbeat
+        self._check_watchdog(adapter.heartbeat)
+
+    def _check_unenforced(self) -> None:
+        """What nothing keeps yet is refused: a limit that somebody trusts must be one."""
+        limits = self.limits
+        declared = {
+            "limits.max_switches_per_hour": limits.max_switches_per_hour is not None,
+            "limits.max_switches_per_day": limits.max_switches_per_day is not None,
+            "witnesses": bool(self.witnesses),
+            "attended_integrating_hold": self.attended_integrating_hold,
+        }
+        for name, given in declared.items():
+            if given:
+                raise PydanticCustomError(
+                    "not_enforced", "{name} is not watched by this version: leave it out", {"name": name}
+                )
+
+    def _check_watchdog(self, beat: HeartbeatRegister | None) -> None:
+        if beat is None:
+            return
+        out, exit_action = self.controller_output, self.exit_action
+        if beat.fixed_value is not None and not out.low <= beat.fixed_value <= out.high:
+            raise PydanticCustomError(
+                "watchdog_contradiction", "adapter.heartbeat.fixed_value must lie inside controller_output.low/high"
+            )
+        if beat.timeout_s < 4 * self.sample_interval_s:
+            raise PydanticCustomError(
+                "watchdog_contradiction",
+                "adapter.heartbeat.timeout_s must be at least four times sample_interval_s: beats come with samples",
+            )
+        if exit_action.kind == "fixed" and beat.watchdog is WatchdogAction.RESTING:
+            raise PydanticCustomError(
+                "watchdog_contradiction",
+                "adapter.heartbeat.watchdog 'resting' contradicts exit_action 'fixed': both must end at one value",
+            )
         if (
-            beat is not None
-            and beat.watchdog is WatchdogAction.FIXED
+            beat.watchdog is WatchdogAction.FIXED
             and self.exit_action.kind == "fixed"
             and beat.fixed_value != self.exit_action.value
         ):

@@ -6,9 +6,9 @@ from typing import Annotated, Any
 
 from pydantic import Field
 
-from gainwright_wire.base import ShortText, Wire
+from gainwright_wire.base import HIDDEN, ShortText, Wire
 
-PersonName = Annotated[str, Field(min_length=1, max_length=80, pattern=r"^[^\x00-\x1f]+$")]
+PersonName = Annotated[str, Field(min_length=1, max_length=80, pattern=rf"^[^\x00-\x1f{HIDDEN}]+$")]
 
 
 class Person(Wire):

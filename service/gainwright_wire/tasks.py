@@ -8,7 +8,7 @@ from typing import Annotated, Any, Literal
 from pydantic import Field
 
 from gainwright_wire.analyses import AnalysisReply, Checklist, Finding, Grade, Model, Proposal, RefusedRule
-from gainwright_wire.base import Finite, Flag, Interval, LongText, NonNegative, Positive, ShortText, Wire
+from gainwright_wire.base import Finite, Flag, Interval, LongText, NonNegative, Positive, ShortText, Stated, Wire
 
 BENCH_SENTENCE = (
     "Worst case, the output stays anywhere in its band until somebody notices: nothing is damaged and nobody is hurt."
@@ -69,12 +69,12 @@ class StartExperiment(Wire):
     bench_sentence_signed: Flag = False
     resting_output: Finite | None = None
     reference: Finite | None = None
-    precision_percent: Annotated[float, Field(ge=1, le=50, allow_inf_nan=False)] | None = None
-    scored_cycles: Annotated[int, Field(ge=2, le=20)] | None = None
+    precision_percent: Annotated[float, Field(strict=True, ge=1, le=50, allow_inf_nan=False)] | None = None
+    scored_cycles: Annotated[int, Field(strict=True, ge=2, le=20)] | None = None
     answers: dict[Annotated[str, Field(pattern=r"^B[0-9]{1,2}$")], Answer] = {}
-    approver: ShortText | None = None
-    acknowledged_by: ShortText | None = None
-    work_order: ShortText | None = None
+    approver: Stated | None = None
+    acknowledged_by: Stated | None = None
+    work_order: Stated | None = None
     comment: LongText = ""
 
 

@@ -20,6 +20,7 @@ from gainwright_wire.loops import Loop
 __all__ = ["database_url", "postgresql_server"]
 
 AT = "2026-03-01T08:00:00.000+00:00"
+"""Long ago: a start that waits since then is stale."""
 QUICK = {
     "tag": "SIM-1",
     "class": "bench",
@@ -72,7 +73,8 @@ async def test_a_queued_experiment_is_claimed_run_stored_and_journalled(database
     loop = Loop.model_validate(QUICK)
     async with writing(engine) as connection:
         await loops.register(connection, loop, by="Ada", at=AT)
-        task_id = await tasks.create(connection, kind="experiment", loop=loop, request=START, by="Ada", at=AT)
+        now = clock.wall_time().isoformat()
+        task_id = await tasks.create(connection, kind="experiment", loop=loop, request=START, by="Ada", at=now)
     fence = fence_of(engine, tmp_path, "local")
     worker = Worker(engine, fence, clock, pool, site="local", name="w1", log=structlog.get_logger())
     serving = asyncio.ensure_future(worker.run())
@@ -90,6 +92,30 @@ async def test_a_queued_experiment_is_claimed_run_stored_and_journalled(database
         whole = await samples.columns(connection, task_id)
         assert await journal.verify(connection) is None
     assert len(whole["time_s"]) == row["progress"]["samples"]
+    pool.close()
+    await engine.dispose()
+
+
+async def test_a_start_that_waited_too_long_for_its_worker_moves_nothing(database_url: str, tmp_path: Path) -> None:
+    engine, pool, clock = open_engine(database_url), AnalysisPool(), SystemClock()
+    await migrate(engine)
+    loop = Loop.model_validate(QUICK)
+    async with writing(engine) as connection:
+        await loops.register(connection, loop, by="Ada", at=AT)
+        task_id = await tasks.create(connection, kind="experiment", loop=loop, request=START, by="Ada", at=AT)
+    fence = fence_of(engine, tmp_path, "local")
+    worker = Worker(engine, fence, clock, pool, site="local", name="w1", log=structlog.get_logger())
+    serving = asyncio.ensure_future(worker.run())
+
+    async def over() -> bool:
+        return bool((await _state(engine, task_id))["state"] == "finished")
+
+    await _until(over)
+    row = await _state(engine, task_id)
+    worker.end()
+    await serving
+    assert (row["outcome"], row["exit"]) == ("limited", "not_written")
+    assert "ask again" in row["exit_detail"]
     pool.close()
     await engine.dispose()
 

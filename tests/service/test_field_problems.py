@@ -28,7 +28,7 @@ def _problems(**changes: Any) -> tuple[FieldProblem, ...]:
         ({"limits__process_variable_high": math.inf}, "limits.process_variable_high", "a finite number"),
         ({"limits__output_low": 95}, "limits.output_low", "output_low must be below output_high"),
         ({"limits__process_variable_low": -5}, "limits.process_variable_low/high", "must lie inside"),
-        ({"limits__max_amplitude": -1}, "limits.max_amplitude", "above 0"),
+        ({"limits__max_amplitude": -1}, "limits.max_amplitude", "at least 1e-09"),
         ({"limits__max_amplitude": 50}, "limits.max_amplitude", "at most half of the output band"),
         ({"adapter": {"kind": "telegraph"}}, "adapter.kind", "'modbus'"),
         ({"adapter": {"host": "127.0.0.1"}}, "adapter.kind", ""),

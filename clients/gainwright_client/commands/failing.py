@@ -27,6 +27,10 @@ def failing(as_json: bool) -> Iterator[None]:
     except MalformedFile as error:
         field = {"field": error.column, "problem": error.problem, "allowed": error.allowed}
         tell(ExitCode.MALFORMED_FILE, "malformed_file", str(error), [field], as_json=as_json)
+    except UnicodeError as error:
+        tell(ExitCode.USAGE, "usage", f"a character that cannot be sent or kept: {error}", [], as_json=as_json)
+    except RecursionError:
+        tell(ExitCode.MALFORMED_FILE, "malformed_file", "the file is nested too deeply", [], as_json=as_json)
     except (KeyboardInterrupt, typer.Abort):
         tell(ExitCode.LEFT, "left", "left", [], as_json=as_json)
 

@@ -96,6 +96,8 @@ def _in_store(
         tell(ExitCode.REFUSED, error.code.value, error.detail, [], as_json=as_json)
     except ServiceError as error:
         tell(ExitCode.SERVICE, error.code.value, error.detail, [], as_json=as_json)
+    except OSError as error:
+        tell(ExitCode.USAGE, "usage", f"the data folder cannot be used: {error}", [], as_json=as_json)
     raise AssertionError("every error ends the command")
 
 

@@ -56,7 +56,7 @@ def create_app(context: Context) -> FastAPI:
     for router in ROUTERS:
         app.include_router(router)
     problems.install(app)
-    app.add_middleware(BodyBound)
+    app.add_middleware(BodyBound, known=context.knows)
     app.add_middleware(_Counting, counts=app.state.counts)
     app.openapi = lambda: _openapi(app)  # type: ignore[method-assign]
     return app

@@ -11,6 +11,7 @@ from sqlalchemy.ext.asyncio import AsyncEngine
 
 from gainwright_service.api.following import Follower
 from gainwright_service.clock import Clock
+from gainwright_service.store import people
 
 
 class Analyses(Protocol):
@@ -39,6 +40,11 @@ class Context:
     clock: Clock
     analyses: Analyses
     follower: Follower
+
+    async def knows(self, token: str) -> bool:
+        """Whether a token is a person's."""
+        async with self.engine.connect() as connection:
+            return await people.person_of(connection, token) is not None
 
     def now(self) -> str:
         """The civil time as people read it, ISO 8601 in UTC."""

@@ -77,10 +77,11 @@ def blocking(sheet: Checklist) -> tuple[ChecklistItem, ...]:
     """The items that forbid the start.
 
     On `plant` every before-item that fails, and every caution for which nobody has signed a reason. On `bench`
-    only the few of the table marked so.
+    only the few of the table marked so, and whatever a person answered with fail.
     """
     if sheet.loop_class == LoopClass.BENCH.value:
-        return tuple(i for i in sheet.items if i.verdict is Verdict.FAIL and _BY_ID[i.id].gates_bench)
+        failed = [i for i in sheet.items if i.verdict is Verdict.FAIL]
+        return tuple(i for i in failed if _BY_ID[i.id].gates_bench or i.basis is ItemAnswer.ANSWERED)
     return tuple(
         i
         for i in sheet.items

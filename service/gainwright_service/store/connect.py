@@ -44,7 +44,10 @@ def open_engine(url: str) -> AsyncEngine:
     settings: dict[str, Any] = {}
     if not embedded:
         settings = {"pool_pre_ping": True, "pool_size": 10, "pool_timeout": 3, "connect_args": QUICK_TO_FAIL}
-    engine = create_async_engine(url, **settings)
+    try:
+        engine = create_async_engine(url, **settings)
+    except exc.ArgumentError as error:
+        raise StoreUnavailable(f"the database's address cannot be used: {error}") from error
     event.listen(engine.sync_engine, "handle_error", _translate)
     if embedded:
         event.listen(engine.sync_engine, "connect", _embed)

@@ -17,7 +17,7 @@ from sqlalchemy.ext.asyncio import AsyncConnection
 from gainwright_service.errors import ExitNotAcknowledged, GroupBusy, LoopBusy, NotActive, NotFound
 from gainwright_service.store import journal
 from gainwright_service.store.tables import group_claims, tasks
-from gainwright_wire.loops import Loop
+from gainwright_wire.loops import Loop, ModbusTcp
 
 DRIVING_KINDS = frozenset({"prove_exit", "experiment", "install", "roll_back"})
 FINISHED = "finished"
@@ -58,14 +58,26 @@ async def create(
         )
     except IntegrityError as error:
         raise LoopBusy(f"{loop.tag} is being driven by another task; wait for it or stop it") from error
-    for group in sorted(set(loop.interaction_groups)) if drives else ():
+    for group in sorted({group.casefold() for group in loop.interaction_groups}) if drives else ():
         try:
             await connection.execute(insert(group_claims).values(interaction_group=group, task_id=task_id))
         except IntegrityError as error:
             raise GroupBusy(f"interaction group {group!r}: another of its loops is being driven") from error
+    if drives and isinstance(loop.adapter, ModbusTcp):
+        place = output_place(loop.adapter)
+        try:
+            await connection.execute(insert(group_claims).values(interaction_group=place, task_id=task_id))
+        except IntegrityError as error:
+            raise GroupBusy(f"{place}: another loop drives this very output; wait for it or stop it") from error
     detail = {"task": task_id, "kind": kind, "request": request}
     await journal.append(connection, at=at, person=by, act="task_requested", subject=loop.tag, detail=detail)
     return task_id
+
+
+def output_place(adapter: ModbusTcp) -> str:
+    """Where a loop's output stands in the world: two tags may name it, one task may drive it."""
+    return f"output {adapter.host.casefold()}:{adapter.port} device {adapter.device_id} register " \
+           f"{adapter.controller_output.address}"  # fmt: skip
 
 
 async def get(connection: AsyncConnection, task_id: str) -> Row:
