@@ -95,12 +95,14 @@ def candidates_of(
     """
     found: list[Candidate] = []
     best = math.inf
+    # At the oscillation the process answers against the output, whatever its sign at rest seems to be.
+    effect = -1.0 if point.response.real > 0 else 1.0
     for fit in explanation.fits:
         weight = math.exp(-SOFTENED * max(fit.criterion - best, 0.0)) if math.isfinite(best) else 1.0
         if weight < LEAST_WEIGHT:
             break
         crossing = crossing_of(fit, latency)
-        if crossing is None or _astray(fit, crossing, point, latency):
+        if crossing is None or fit.linear[0] * effect < 0 or _astray(fit, crossing, point, latency):
             continue
         if not found:
             best, weight = fit.criterion, 1.0

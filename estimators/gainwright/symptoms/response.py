@@ -31,10 +31,11 @@ def response(evidence: Evidence) -> list[Finding]:
     if lead is None:
         return []
     found = [judge("unlike_model", evidence.misfit_share)]
-    if evidence.declared.effect is not None:
-        contrary = lead.linear[0] * evidence.declared.effect < 0
-        found.append(judge("wrong_sign", 1.0 if contrary else 0.0))
     candidates = evidence.candidates
+    if candidates and evidence.declared.effect is not None:
+        # Candidates have the sign that the measured response shows at the oscillation.
+        contrary = candidates[0].fit.linear[0] * evidence.declared.effect < 0
+        found.append(judge("wrong_sign", 1.0 if contrary else 0.0))
     if candidates:
         found.append(judge("inverse_response", _inverse_response(evidence)))
         found.append(judge("integrating", sum(one.weight for one in candidates if one.fit.shape.integrator)))
